@@ -1,0 +1,1 @@
+"""Store and physics together: figures of the fleet."""

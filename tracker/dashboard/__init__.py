@@ -1,0 +1,1 @@
+"""The dashboard: pages over the store, served to a browser."""

@@ -1,0 +1,1 @@
+"""An invented utility that writes its files as a real one would."""

@@ -1,0 +1,1 @@
+"""What a transformer is: nameplate, preferred ratings, default characteristics. No I/O."""

@@ -1,0 +1,1 @@
+"""What to replace first, and with what."""

@@ -1,0 +1,1 @@
+"""Readings to database and back: the only room with SQL in it."""
