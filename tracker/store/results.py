@@ -1,0 +1,179 @@
+"""Assessments and their results: written once, then read a page at a time."""
+
+from __future__ import annotations
+
+import datetime as dt
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+from sqlalchemy import ColumnElement, Connection, Select, func, insert, or_, select
+
+from tracker.errors import InputError
+from tracker.store.models import Assessment, Site, Unit, UnitResult
+
+#: Columns of the ranking: by these names people sort, filter and print.
+RANKING_COLUMNS: dict[str, ColumnElement[Any]] = {
+    "unit_id": Unit.unit_id.expression,
+    "site_id": Site.site_id.expression,
+    "feeder": Site.feeder.expression,
+    "rated_kva": Unit.rated_kva.expression,
+    "peak_load_pct": UnitResult.peak_load_pct.expression,
+    "peak_hot_spot_c": UnitResult.peak_hot_spot_c.expression,
+    "peak_hot_spot_at": UnitResult.peak_hot_spot_at.expression,
+    "peak_top_oil_c": UnitResult.peak_top_oil_c.expression,
+    "hours_over_rating": UnitResult.hours_over_rating.expression,
+    "hours_over_hot_spot_limit": UnitResult.hours_over_hot_spot_limit.expression,
+    "aging_factor": UnitResult.aging_factor.expression,
+    "life_used_pct": UnitResult.life_used_pct.expression,
+    "coverage_pct": UnitResult.coverage_pct.expression,
+}
+
+TEXT_COLUMNS = frozenset({"unit_id", "site_id", "feeder"})
+HOTTEST_FIRST = (("peak_hot_spot_c", "desc"),)
+
+
+@dataclass(frozen=True, slots=True)
+class AssessmentRow:
+    """One run of the thermal model: its settings and what it was made from."""
+
+    key: int
+    made_at: dt.datetime
+    program_version: str
+    settings: Mapping[str, Any]
+    starts_at: dt.datetime
+    ends_at: dt.datetime
+    data_fingerprint: str
+
+
+@dataclass(frozen=True, slots=True)
+class Filter:
+    """A condition on a column of the ranking.
+
+    `kind` is one of: contains, equals (text); equals, above, below, from, to (numbers); blank.
+    """
+
+    column: str
+    kind: str
+    value: float | str | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class RankingPage:
+    """Some rows of the ranking, and how many there are in all."""
+
+    rows: list[dict[str, Any]]
+    total: int
+
+
+def latest_assessment(connection: Connection) -> AssessmentRow | None:
+    """Return the newest assessment; None when there is none."""
+    row = connection.execute(
+        select(
+            Assessment.id,
+            Assessment.made_at,
+            Assessment.program_version,
+            Assessment.settings,
+            Assessment.starts_at,
+            Assessment.ends_at,
+            Assessment.data_fingerprint,
+        )
+        .order_by(Assessment.id.desc())
+        .limit(1)
+    ).first()
+    return None if row is None else AssessmentRow(*row)
+
+
+def add_assessment(connection: Connection, **columns: Any) -> int:
+    """Insert an assessment and return its key."""
+    inserted = connection.execute(insert(Assessment).values(**columns)).inserted_primary_key
+    assert inserted is not None
+    return int(inserted[0])
+
+
+def add_results(connection: Connection, rows: Sequence[Mapping[str, Any]]) -> None:
+    """Insert the results of many units."""
+    if rows:
+        connection.execute(insert(UnitResult), list(rows))
+
+
+def ranking_page(
+    connection: Connection,
+    assessment_key: int,
+    *,
+    start: int = 0,
+    stop: int | None = None,
+    sort: Sequence[tuple[str, str]] = HOTTEST_FIRST,
+    filters: Sequence[Filter] = (),
+) -> RankingPage:
+    """Return rows ``[start, stop)`` of the ranking, sorted and filtered in the database.
+
+    Parameters
+    ----------
+    sort : sequence of (column, "asc" or "desc")
+        Units without a figure come last either way; ties break by unit id.
+
+    Raises
+    ------
+    InputError
+        If a column or a kind of filter is not known.
+    """
+    query = _joined(assessment_key).where(*(_condition(each) for each in filters))
+    total = connection.scalar(select(func.count()).select_from(query.subquery())) or 0
+    for name, direction in sort:
+        column = _column(name)
+        if direction not in ("asc", "desc"):
+            raise InputError(f"sort direction {direction!r} is not known; allowed: asc, desc.")
+        query = query.order_by(
+            column.is_(None), column.desc() if direction == "desc" else column.asc()
+        )
+    query = query.order_by(Unit.unit_id).offset(start)
+    if stop is not None:
+        query = query.limit(max(stop - start, 0))
+    return RankingPage([dict(row._mapping) for row in connection.execute(query)], total)
+
+
+def feeders(connection: Connection) -> list[str]:
+    """Return the feeders of the fleet, in order."""
+    query = select(Site.feeder).where(Site.feeder.is_not(None)).distinct().order_by(Site.feeder)
+    return [str(feeder) for feeder in connection.scalars(query)]
+
+
+def _joined(assessment_key: int) -> Select[Any]:
+    return (
+        select(*(column.label(name) for name, column in RANKING_COLUMNS.items()))
+        .join_from(UnitResult, Unit, UnitResult.unit_key == Unit.id)
+        .outerjoin(Site, UnitResult.site_key == Site.id)
+        .where(UnitResult.assessment_key == assessment_key)
+    )
+
+
+def _column(name: str) -> ColumnElement[Any]:
+    if name not in RANKING_COLUMNS:
+        raise InputError(
+            f"column {name!r} is not in the ranking; choose from {', '.join(RANKING_COLUMNS)}."
+        )
+    return RANKING_COLUMNS[name]
+
+
+def _condition(each: Filter) -> ColumnElement[bool]:
+    column = _column(each.column)
+    if each.kind == "blank":
+        return column.is_(None)
+    if each.column in TEXT_COLUMNS:
+        text = str(each.value)
+        if each.kind == "contains":
+            return column.icontains(text, autoescape=True)
+        if each.kind == "equals":
+            return or_(column == text)
+    else:
+        comparisons = {
+            "equals": column == each.value,
+            "above": column > each.value,
+            "below": column < each.value,
+            "from": column >= each.value,
+            "to": column <= each.value,
+        }
+        if each.kind in comparisons:
+            return comparisons[each.kind]
+    raise InputError(f"filter {each.kind!r} on column {each.column!r} is not known.")
