@@ -7,7 +7,6 @@ Revises:
 import sqlalchemy as sa
 from alembic import op
 
-
 revision = "0001"
 down_revision = None
 branch_labels = None
@@ -102,31 +101,6 @@ def upgrade() -> None:
         sa.UniqueConstraint("unit_id", name=op.f("uq_unit_unit_id")),
     )
     op.create_table(
-        "connection",
-        sa.Column("id", sa.Integer(), nullable=False),
-        sa.Column("meter_key", sa.Integer(), nullable=False),
-        sa.Column("site_key", sa.Integer(), nullable=False),
-        sa.Column("starts_at", sa.DateTime(), nullable=True),
-        sa.Column("ends_at", sa.DateTime(), nullable=True),
-        sa.Column("multiplier", sa.Double(), nullable=False),
-        sa.CheckConstraint("multiplier > 0", name=op.f("ck_connection_multiplier_positive")),
-        sa.CheckConstraint("starts_at < ends_at", name=op.f("ck_connection_starts_before_end")),
-        sa.ForeignKeyConstraint(
-            ["meter_key"],
-            ["series.id"],
-            name=op.f("fk_connection_meter_key_series"),
-            ondelete="CASCADE",
-        ),
-        sa.ForeignKeyConstraint(
-            ["site_key"], ["site.id"], name=op.f("fk_connection_site_key_site"), ondelete="CASCADE"
-        ),
-        sa.PrimaryKeyConstraint("id", name=op.f("pk_connection")),
-    )
-    with op.batch_alter_table("connection", schema=None) as batch_op:
-        batch_op.create_index(batch_op.f("ix_connection_meter_key"), ["meter_key"], unique=False)
-        batch_op.create_index(batch_op.f("ix_connection_site_key"), ["site_key"], unique=False)
-
-    op.create_table(
         "intake_refusal",
         sa.Column("id", sa.Integer(), nullable=False),
         sa.Column("file_key", sa.Integer(), nullable=False),
@@ -145,6 +119,40 @@ def upgrade() -> None:
     )
     with op.batch_alter_table("intake_refusal", schema=None) as batch_op:
         batch_op.create_index(batch_op.f("ix_intake_refusal_file_key"), ["file_key"], unique=False)
+
+    op.create_table(
+        "meter_connection",
+        sa.Column("id", sa.Integer(), nullable=False),
+        sa.Column("meter_key", sa.Integer(), nullable=False),
+        sa.Column("site_key", sa.Integer(), nullable=False),
+        sa.Column("starts_at", sa.DateTime(), nullable=True),
+        sa.Column("ends_at", sa.DateTime(), nullable=True),
+        sa.Column("multiplier", sa.Double(), nullable=False),
+        sa.CheckConstraint("multiplier > 0", name=op.f("ck_meter_connection_multiplier_positive")),
+        sa.CheckConstraint(
+            "starts_at < ends_at", name=op.f("ck_meter_connection_starts_before_end")
+        ),
+        sa.ForeignKeyConstraint(
+            ["meter_key"],
+            ["series.id"],
+            name=op.f("fk_meter_connection_meter_key_series"),
+            ondelete="CASCADE",
+        ),
+        sa.ForeignKeyConstraint(
+            ["site_key"],
+            ["site.id"],
+            name=op.f("fk_meter_connection_site_key_site"),
+            ondelete="CASCADE",
+        ),
+        sa.PrimaryKeyConstraint("id", name=op.f("pk_meter_connection")),
+    )
+    with op.batch_alter_table("meter_connection", schema=None) as batch_op:
+        batch_op.create_index(
+            batch_op.f("ix_meter_connection_meter_key"), ["meter_key"], unique=False
+        )
+        batch_op.create_index(
+            batch_op.f("ix_meter_connection_site_key"), ["site_key"], unique=False
+        )
 
     op.create_table(
         "placement",
@@ -180,11 +188,6 @@ def upgrade() -> None:
         ),
         sa.PrimaryKeyConstraint("series_key", "quantity", "month", name=op.f("pk_reading_block")),
     )
-    with op.batch_alter_table("reading_block", schema=None) as batch_op:
-        batch_op.create_index(
-            batch_op.f("ix_reading_block_month_quantity"), ["month", "quantity"], unique=False
-        )
-
     op.create_table(
         "site_load_block",
         sa.Column("site_key", sa.Integer(), nullable=False),
@@ -274,24 +277,21 @@ def downgrade() -> None:
     op.drop_table("unit_result")
     op.drop_table("superseded_block")
     op.drop_table("site_load_block")
-    with op.batch_alter_table("reading_block", schema=None) as batch_op:
-        batch_op.drop_index(batch_op.f("ix_reading_block_month_quantity"))
-
     op.drop_table("reading_block")
     with op.batch_alter_table("placement", schema=None) as batch_op:
         batch_op.drop_index(batch_op.f("ix_placement_unit_key"))
         batch_op.drop_index(batch_op.f("ix_placement_site_key"))
 
     op.drop_table("placement")
+    with op.batch_alter_table("meter_connection", schema=None) as batch_op:
+        batch_op.drop_index(batch_op.f("ix_meter_connection_site_key"))
+        batch_op.drop_index(batch_op.f("ix_meter_connection_meter_key"))
+
+    op.drop_table("meter_connection")
     with op.batch_alter_table("intake_refusal", schema=None) as batch_op:
         batch_op.drop_index(batch_op.f("ix_intake_refusal_file_key"))
 
     op.drop_table("intake_refusal")
-    with op.batch_alter_table("connection", schema=None) as batch_op:
-        batch_op.drop_index(batch_op.f("ix_connection_site_key"))
-        batch_op.drop_index(batch_op.f("ix_connection_meter_key"))
-
-    op.drop_table("connection")
     op.drop_table("unit")
     op.drop_table("site")
     op.drop_table("series")

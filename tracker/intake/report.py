@@ -64,9 +64,7 @@ class FileReport:
     @property
     def readings(self) -> int:
         """All rows, or cells, of the file."""
-        return (
-            self.fates.taken + self.fates.unchanged + self.fates.corrected + len(self.refusals)
-        )
+        return self.fates.taken + self.fates.unchanged + self.fates.corrected + len(self.refusals)
 
 
 def as_json(reports: Iterable[FileReport]) -> dict[str, Any]:

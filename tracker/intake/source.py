@@ -14,7 +14,7 @@ import itertools
 from abc import ABC, abstractmethod
 from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
-from typing import IO, TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, BinaryIO, cast
 
 import duckdb
 import xxhash
@@ -170,8 +170,10 @@ class CsvSource(Source):
         self.headings = [heading.strip() for heading in row]
         self._index_headings()
 
-    def _open(self) -> IO[bytes]:
-        return gzip.open(self.path, "rb") if self._gzipped else self.path.open("rb")
+    def _open(self) -> BinaryIO:
+        if self._gzipped:
+            return cast("BinaryIO", gzip.open(self.path, "rb"))
+        return self.path.open("rb")
 
     def _heading_line(self) -> tuple[int, str]:
         """Return the number of blank lines before the headings, and their line."""
@@ -241,7 +243,9 @@ class CsvSource(Source):
         for record, column, kind, message in rows:
             heading = self.headings[int(column[1:])] if column else ""
             # DuckDB counts records after the lines it was told to skip.
-            broken.setdefault(int(record) + self._blank_lines, (heading, *_plain_words(kind, message)))
+            broken.setdefault(
+                int(record) + self._blank_lines, (heading, *_plain_words(kind, message))
+            )
         return broken
 
     def _records(self) -> Iterator[tuple[int, int, str]]:
@@ -289,7 +293,10 @@ def _plain_words(kind: str, message: str) -> tuple[str, str]:
     if kind == "INVALID ENCODING":
         return "row.encoding", "the row is not UTF-8 text; save the file as UTF-8"
     if kind == "UNQUOTED VALUE":
-        return "row.quotes", 'a quoted field is not closed, or text stands behind its closing quote (")'
+        return (
+            "row.quotes",
+            'a quoted field is not closed, or text stands behind its closing quote (")',
+        )
     if kind == "LINE SIZE OVER MAXIMUM":
         return "row.too_long", "the row is longer than 2 MB; one record a line is expected"
     return "row.unreadable", message.splitlines()[0] if message else kind.lower()
@@ -334,6 +341,10 @@ class FrameSource(Source):
 
 
 def _row_text(values: Sequence[Any]) -> str:
+    import pandas as pd  # noqa: PLC0415 - heavy
+
     row = io.StringIO()
-    csv.writer(row, lineterminator="").writerow(["" if v is None or v != v else v for v in values])
+    csv.writer(row, lineterminator="").writerow(
+        ["" if pd.isna(value) else value for value in values]
+    )
     return row.getvalue()[:KEPT_TEXT]

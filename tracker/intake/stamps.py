@@ -7,7 +7,7 @@ of spring does not exist and an hour of autumn comes twice.
 from __future__ import annotations
 
 import datetime as dt
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from zoneinfo import ZoneInfo
 
@@ -46,7 +46,9 @@ class StampTable:
     """Distinct stamps, read: all of shape (n_stamp,)."""
 
     first_s: NDArray[np.int64]  #: the moment [s since 1970, UTC], NO_STAMP where it cannot be read
-    second_s: NDArray[np.int64]  #: the later of two moments a repeated hour may mean, else `first_s`
+    second_s: NDArray[
+        np.int64
+    ]  #: the later of two moments a repeated hour may mean, else `first_s`
     problems: dict[int, tuple[str, str]]  #: place: (code, reason)
 
 
@@ -72,16 +74,22 @@ class StampReader:
         """Read distinct dates: `first_s` is local midnight, `second_s` the next one."""
         return self._table(texts, self._day)
 
-    def _table(self, texts: Sequence[str | None], reader: object) -> StampTable:
+    def _table(
+        self,
+        texts: Sequence[str | None],
+        reader: Callable[[str], tuple[int, int] | tuple[str, str]],
+    ) -> StampTable:
         first = np.full(len(texts), NO_STAMP, dtype=np.int64)
         second = np.full(len(texts), NO_STAMP, dtype=np.int64)
         problems: dict[int, tuple[str, str]] = {}
         for place, text in enumerate(texts):
-            known = self._known.get(text) if text is not None else _BLANK
-            if known is None:
-                assert text is not None and callable(reader)
-                known = reader(text)
-                self._known[text] = known
+            known: tuple[int, int] | tuple[str, str]
+            if text is None:
+                known = _BLANK
+            elif text in self._known:
+                known = self._known[text]
+            else:
+                known = self._known[text] = reader(text)
             if isinstance(known[0], str):
                 problems[place] = (known[0], str(known[1]))
             else:

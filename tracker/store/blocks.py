@@ -98,7 +98,7 @@ def pack(values: Float32Array, flags: FlagArray, step_min: int) -> list[bytes]:
     room[:, split:] = flags
     header = np.zeros(n_block, dtype=HEADER)
     header["version"], header["step_min"], header["count"] = VERSION, step_min, n_value
-    header["checksum"] = [xxhash.xxh3_64_intdigest(row[HEADER_BYTES:]) for row in room]
+    header["checksum"] = [xxhash.xxh3_64_intdigest(row[HEADER_BYTES:].data) for row in room]
     room[:, :HEADER_BYTES] = header.view(np.uint8).reshape(n_block, HEADER_BYTES)
     return [row.tobytes() for row in room]
 
@@ -133,9 +133,7 @@ def unpack(payloads: Sequence[bytes]) -> tuple[Float32Array, FlagArray]:
         raise StoreError(_DAMAGED.format(f"block version {header['version'].max()} is unknown"))
     if (header["count"] != n_value).any() or width != HEADER_BYTES + BYTES_A_VALUE * n_value:
         raise StoreError(_DAMAGED.format("a block's length is not what its header says"))
-    sums = [
-        xxhash.xxh3_64_intdigest(payload[HEADER_BYTES:]) for payload in map(memoryview, payloads)
-    ]
+    sums = [xxhash.xxh3_64_intdigest(row[HEADER_BYTES:].data) for row in room]
     if (header["checksum"] != np.array(sums, dtype=np.uint64)).any():
         raise StoreError(_DAMAGED.format("a block's checksum does not hold"))
     split = HEADER_BYTES + 4 * n_value

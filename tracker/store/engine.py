@@ -90,14 +90,19 @@ class Database:
             yield connection
 
     @contextmanager
-    def writing(self) -> Iterator[Connection]:
-        """Give a connection in one transaction: all of it is kept, or nothing."""
+    def writing(self, *, keep: bool = True) -> Iterator[Connection]:
+        """Give a connection in one transaction: all of it is kept, or nothing.
+
+        With `keep` false nothing is, whatever happens: to see what would become of it.
+        """
         with (
             self._translated(),
             self.engine.connect().execution_options(**{WRITES: True}) as connection,
-            connection.begin(),
+            connection.begin() as transaction,
         ):
             yield connection
+            if not keep:
+                transaction.rollback()
 
     @contextmanager
     def _translated(self) -> Iterator[None]:

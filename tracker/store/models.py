@@ -138,10 +138,10 @@ class Series(Base):
     )
 
 
-class Connection(Base):
+class MeterConnection(Base):
     """A meter at a site, from a moment to a moment (the end excluded); NULL is always."""
 
-    __tablename__ = "connection"
+    __tablename__ = "meter_connection"
     id: Mapped[int] = mapped_column(primary_key=True)
     meter_key: Mapped[int] = mapped_column(ForeignKey("series.id", ondelete="CASCADE"), index=True)
     site_key: Mapped[int] = mapped_column(ForeignKey("site.id", ondelete="CASCADE"), index=True)
@@ -164,7 +164,6 @@ class ReadingBlock(Base):
     quantity: Mapped[str] = mapped_column(String(12), primary_key=True)
     month: Mapped[int] = mapped_column(primary_key=True)
     payload: Mapped[bytes] = mapped_column(LargeBinary)
-    __table_args__ = (Index(None, "month", "quantity"),)
 
 
 class SupersededBlock(Base):

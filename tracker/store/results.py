@@ -7,10 +7,10 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
-from sqlalchemy import ColumnElement, Connection, Select, func, insert, or_, select
+from sqlalchemy import ColumnElement, Connection, Select, and_, func, insert, or_, select
 
 from tracker.errors import InputError
-from tracker.store.models import Assessment, Site, Unit, UnitResult
+from tracker.store.models import Assessment, IntakeFile, Site, Unit, UnitResult
 
 #: Columns of the ranking: by these names people sort, filter and print.
 RANKING_COLUMNS: dict[str, ColumnElement[Any]] = {
@@ -18,6 +18,7 @@ RANKING_COLUMNS: dict[str, ColumnElement[Any]] = {
     "site_id": Site.site_id.expression,
     "feeder": Site.feeder.expression,
     "rated_kva": Unit.rated_kva.expression,
+    "winding_rise_c": Unit.winding_rise_c.expression,
     "peak_load_pct": UnitResult.peak_load_pct.expression,
     "peak_hot_spot_c": UnitResult.peak_hot_spot_c.expression,
     "peak_hot_spot_at": UnitResult.peak_hot_spot_at.expression,
@@ -50,12 +51,13 @@ class AssessmentRow:
 class Filter:
     """A condition on a column of the ranking.
 
-    `kind` is one of: contains, equals (text); equals, above, below, from, to (numbers); blank.
+    `kind` is one of: contains, equals (text); equals, above, below, from, to (numbers, times);
+    blank.
     """
 
     column: str
     kind: str
-    value: float | str | None = None
+    value: float | str | dt.datetime | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -131,6 +133,46 @@ def ranking_page(
     if stop is not None:
         query = query.limit(max(stop - start, 0))
     return RankingPage([dict(row._mapping) for row in connection.execute(query)], total)
+
+
+def count_units(
+    connection: Connection, assessment_key: int, groups: Mapping[str, Sequence[Filter]]
+) -> dict[str, int]:
+    """Count the units that meet each group's filters, all groups in one statement.
+
+    Raises
+    ------
+    InputError
+        If a column or a kind of filter is not known.
+    """
+    joined = _joined(assessment_key)
+    counts = [
+        func.count().filter(and_(True, *map(_condition, filters))).label(name)
+        for name, filters in groups.items()
+    ]
+    row = connection.execute(joined.with_only_columns(*counts, maintain_column_froms=True)).one()
+    return {name: int(count) for name, count in row._mapping.items()}
+
+
+def hotter_units(connection: Connection, assessment_key: int, unit_id: str) -> int:
+    """Count the units that come before one in the order of peak hot spots, ties by unit id."""
+    peak_c = RANKING_COLUMNS["peak_hot_spot_c"]
+    one = _joined(assessment_key).where(Unit.unit_id == unit_id).subquery()
+    hotter = or_(
+        peak_c > one.c.peak_hot_spot_c,
+        and_(peak_c == one.c.peak_hot_spot_c, Unit.unit_id < unit_id),
+    )
+    query = _joined(assessment_key).where(hotter, one.c.unit_id.is_not(None))
+    counted = query.with_only_columns(func.count(), maintain_column_froms=True)
+    return connection.scalar(counted) or 0
+
+
+def files_since(connection: Connection, made_at: dt.datetime) -> int:
+    """Count the files that changed the store after a moment, such as an assessment's making."""
+    query = select(func.count()).where(
+        IntakeFile.imported_at > made_at, IntakeFile.taken + IntakeFile.corrected > 0
+    )
+    return connection.scalar(query) or 0
 
 
 def feeders(connection: Connection) -> list[str]:

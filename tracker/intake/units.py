@@ -1,0 +1,241 @@
+"""The register of units: nameplates, and where each unit stands."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import replace
+from typing import Any
+from zoneinfo import ZoneInfo
+
+import pandas as pd
+from sqlalchemy import Connection
+
+from tracker.errors import ModelRangeError
+from tracker.fleet.nameplate import COOLING_FLOW, Nameplate, completed
+from tracker.intake.register import Column, read_register
+from tracker.intake.report import Fates, FileReport, Finding
+from tracker.intake.site_load import derive_sites
+from tracker.intake.source import Source
+from tracker.intake.stays import NEW, Numbers, StayBook, span_of
+from tracker.store import fleet
+from tracker.store import readings as held_readings
+from tracker.store.fleet import Stay
+from tracker.store.models import Placement, Site, Unit
+
+COLUMNS = (
+    Column("unit_id", required=True),
+    Column("rated_kva", "number", above=0, high=1e6, required=True),
+    Column("feeder"),
+    Column("site_id"),
+    Column("installed_on", "date"),
+    Column("removed_on", "date"),
+    Column("phases", "whole", numbers=(1, 3)),
+    Column("hv_volts", "number", above=0, high=1e6),
+    Column("lv_volts", "number", above=0, high=1e6),
+    Column("impedance_pct", "number", above=0, high=100),
+    Column("winding_rise_c", "number", numbers=(55, 65)),
+    Column("cooling", choices=tuple(COOLING_FLOW)),
+    Column("mounting", choices=("pole", "pad", "platform", "vault")),
+    Column("year_made", "whole", low=1880, high=2200),
+    Column("no_load_loss_w", "number", above=0, high=1e7),
+    Column("load_loss_w", "number", above=0, high=1e7),
+    Column("latitude", "number", low=-90, high=90),
+    Column("longitude", "number", low=-180, high=180),
+    Column("customers", "whole", low=0, high=1e6),
+    Column("critical_customers", "whole", low=0, high=1e6),
+    Column("weather_station"),
+    Column("loss_ratio", "number", above=0, high=1e4),
+    Column("top_oil_rise_c", "number", above=0, high=200),
+    Column("hot_spot_rise_c", "number", above=0, high=300),
+    Column("oil_exponent", "number", above=0, high=2),
+    Column("winding_exponent", "number", above=0, high=2),
+    Column("top_oil_time_constant_h", "number", above=0, high=100),
+    Column("winding_time_constant_h", "number", above=0, high=10),
+)
+
+
+def take_units(connection: Connection, source: Source, zone: ZoneInfo | None) -> FileReport:
+    """Take a register of units into the store.
+
+    Raises
+    ------
+    IntakeError
+        If a required heading is missing, or the file cannot be read to its end.
+    """
+    rows = read_register(source, COLUMNS)
+    frame = rows.frame
+    frame["site_id"] = frame["site_id"].where(frame["site_id"].notna(), frame["unit_id"])
+    frame, findings = _checked_nameplates(frame)
+    plan = _Plan(connection, zone)
+    plan.decide(frame)
+    frame = frame.drop(index=[finding.ordinal for finding in plan.findings])
+    corrected_sites = _put_sites(connection, frame)
+    corrected_units = _put_units(connection, frame)
+    plan.write(connection)
+    return FileReport(
+        source.name,
+        "units",
+        _fates(frame, plan.fate, corrected_units, corrected_sites),
+        source.refusals([*rows.findings, *findings, *plan.findings]),
+        source.left_out([column.heading for column in COLUMNS]),
+    )
+
+
+class _Plan:
+    """Decides where each unit of the file stands, before anything is written."""
+
+    def __init__(self, connection: Connection, zone: ZoneInfo | None) -> None:
+        self._zone = zone
+        self._units = Numbers(_keys(fleet.units(connection), "unit_id"))
+        self._sites = Numbers(_keys(fleet.sites(connection), "site_id"))
+        self._book = StayBook.of(fleet.placements(connection))
+        self.findings: list[Finding] = []
+        self.fate: dict[int, str] = {}
+
+    def decide(self, frame: pd.DataFrame) -> None:
+        """Give each row a fate, or a finding.
+
+        Rows of removed units come first, so that a site is free for the unit that follows, whatever
+        the order of the file.
+        """
+        columns = ["unit_id", "site_id", "installed_on", "removed_on"]
+        by_end = frame.loc[frame["removed_on"].isna().sort_values(kind="stable").index, columns]
+        for ordinal, unit_id, site_id, installed, removed in by_end.itertuples():
+            span, wrong = span_of(installed, removed, self._zone)
+            stay = Stay(NEW, self._units.of(unit_id), self._sites.of(site_id), span)
+            code, reason = "removed_on.too_early", f"unit {unit_id} {wrong}"
+            if wrong is None:
+                code, reason = self._obstacle(unit_id, site_id, stay)
+            if reason:
+                self.findings.append(Finding(ordinal, code.partition(".")[0], code, reason))
+            else:
+                self.fate[ordinal] = self._book.put(stay)
+
+    def _obstacle(self, unit_id: str, site_id: str, stay: Stay) -> tuple[str, str]:
+        elsewhere = self._book.clash(stay)
+        if elsewhere is not None:
+            return (
+                "unit_id.two_places",
+                (
+                    f"unit {unit_id} stands at site {self._sites.name(elsewhere.site_key)} "
+                    f"{elsewhere.span}, at the same time; give that stay a removed_on first"
+                ),
+            )
+        other = self._book.neighbour(stay)
+        if other is not None:
+            return (
+                "site_id.occupied",
+                (
+                    f"unit {self._units.name(other.who)} stands at site {site_id} {other.span}, at the "
+                    "same time; give it a removed_on, or this unit a site of its own"
+                ),
+            )
+        return "", ""
+
+    def write(self, connection: Connection) -> None:
+        """Write the placements, and derive anew the load of sites whose measured unit changed."""
+        unit_keys = self._units.keys(_keys(fleet.units(connection), "unit_id"))
+        site_keys = self._sites.keys(_keys(fleet.sites(connection), "site_id"))
+        added = [
+            replace(stay, who=unit_keys[stay.who], site_key=site_keys[stay.site_key])
+            for stay in self._book.added
+        ]
+        fleet.remove_stays(connection, Placement, [stay.key for stay in self._book.removed])
+        fleet.add_placements(connection, added)
+        derive_sites(connection, _measured_months(connection, [*added, *self._book.removed]))
+
+
+def _measured_months(connection: Connection, stays: Sequence[Stay]) -> set[tuple[int, int]]:
+    """Return the (site, month) that readings at the transformer itself are held of."""
+    series = fleet.unit_series(connection)
+    measured = {series[stay.who]: stay.site_key for stay in stays if stay.who in series}
+    months = held_readings.months_of_series(connection, list(measured))
+    return {
+        (stay.site_key, month)
+        for stay in stays
+        for key, month in months
+        if series.get(stay.who) == key
+    }
+
+
+def _keys(rows: Iterable[Mapping[str, Any]], name: str) -> dict[str, int]:
+    return {row[name]: row["id"] for row in rows}
+
+
+def _fates(
+    frame: pd.DataFrame, placed: Mapping[int, str], units: set[str], sites: set[str]
+) -> Fates:
+    """A row is corrected when its unit, its place, or what it last says of the site changed."""
+    last_of_site = frame.index[~frame["site_id"].duplicated(keep="last")]
+    fates = Fates()
+    for ordinal, unit_id, site_id in frame[["unit_id", "site_id"]].itertuples():
+        fate = placed[ordinal]
+        changed = unit_id in units or (site_id in sites and ordinal in last_of_site)
+        if fate == "unchanged" and changed:
+            fate = "corrected"
+        setattr(fates, fate, getattr(fates, fate) + 1)
+    return fates
+
+
+def _checked_nameplates(frame: pd.DataFrame) -> tuple[pd.DataFrame, list[Finding]]:
+    """Refuse rows whose rises, given or assumed, contradict each other."""
+    findings: list[Finding] = []
+    suspects = frame[frame["hot_spot_rise_c"].notna() | frame["top_oil_rise_c"].notna()]
+    for ordinal, row in suspects.iterrows():
+        try:
+            completed(_nameplate(row))
+        except ModelRangeError as error:
+            findings.append(
+                Finding(int(str(ordinal)), "hot_spot_rise_c", "hot_spot_rise_c.too_low", str(error))
+            )
+    return frame.drop(index=[finding.ordinal for finding in findings]), findings
+
+
+def _nameplate(row: Mapping[str, Any] | pd.Series) -> Nameplate:
+    return Nameplate(**{name: row[name] for name in fleet.NAMEPLATE_COLUMNS})
+
+
+def _put_sites(connection: Connection, frame: pd.DataFrame) -> set[str]:
+    """Write the sites of the file; return those that changed.
+
+    Where several rows are of one site, the last that says something counts.
+    """
+    columns = list(fleet.SITE_COLUMNS)
+    named = frame.groupby("site_id", sort=False)[columns].last()
+    wanted = named.astype(object).where(named.notna(), None)
+    held = {row["site_id"]: row for row in fleet.sites(connection)}
+    corrected: set[str] = set()
+    new: list[dict[str, Any]] = []
+    for row in wanted.reset_index().to_dict("records"):
+        values = {str(name): value for name, value in row.items()}
+        site_id = values.pop("site_id")
+        if site_id not in held:
+            new.append({"site_id": site_id, **values})
+        elif any(held[site_id][name] != value for name, value in values.items()):
+            fleet.change_row(connection, Site, held[site_id]["id"], values)
+            corrected.add(site_id)
+    fleet.add_rows(connection, Site, new)
+    return corrected
+
+
+def _put_units(connection: Connection, frame: pd.DataFrame) -> set[str]:
+    """Write the nameplates of the file; return the ids of changed units."""
+    columns = list(fleet.UNIT_COLUMNS)
+    last = frame.drop_duplicates("unit_id", keep="last")
+    held = {row["unit_id"]: row for row in fleet.units(connection)}
+    corrected: set[str] = set()
+    new: list[dict[str, Any]] = []
+    for values in last[["unit_id", *columns]].to_dict("records"):
+        unit_id = str(values["unit_id"])
+        if unit_id not in held:
+            new.append({str(name): value for name, value in values.items()})
+        elif any(held[unit_id][str(name)] != value for name, value in values.items()):
+            fleet.change_row(
+                connection,
+                Unit,
+                held[unit_id]["id"],
+                {str(name): value for name, value in values.items()},
+            )
+            corrected.add(unit_id)
+    fleet.add_rows(connection, Unit, new)
+    return corrected
