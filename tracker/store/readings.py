@@ -279,19 +279,20 @@ def site_load_months(connection: Connection) -> tuple[int, int] | None:
 
 
 def site_load_blocks(
-    connection: Connection, first_site: int, last_site: int, months: tuple[int, int]
+    connection: Connection, site_keys: Sequence[int] | None, months: tuple[int, int]
 ) -> Iterator[tuple[int, int, bytes]]:
-    """Yield (site key, month, payload) of sites by key and month, both ends included."""
+    """Yield (site key, month, payload), both ends included; of all sites when none are named."""
     query = (
         select(SiteLoadBlock.site_key, SiteLoadBlock.month, SiteLoadBlock.payload)
-        .where(
-            SiteLoadBlock.site_key.between(first_site, last_site),
-            SiteLoadBlock.month.between(*months),
-        )
+        .where(SiteLoadBlock.month.between(*months))
         .order_by(SiteLoadBlock.site_key, SiteLoadBlock.month)
     )
-    for row in connection.execute(query):
-        yield row[0], row[1], row[2]
+    if site_keys is None:
+        yield from ((row[0], row[1], row[2]) for row in connection.execute(query))
+        return
+    for part in in_parts(site_keys):
+        named = query.where(SiteLoadBlock.site_key.in_(part))
+        yield from ((row[0], row[1], row[2]) for row in connection.execute(named))
 
 
 def series_blocks(

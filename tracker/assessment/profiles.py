@@ -1,0 +1,407 @@
+"""From the store's blocks to the arrays that the thermal model runs on.
+
+Load belongs to the site and heat to the unit: a unit's load is that of the sites it stood at, while
+it stood there. Arrays begin with the period's first interval; NaN marks a gap.
+"""
+
+from __future__ import annotations
+
+import datetime as dt
+import math
+from collections.abc import Iterable, Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import xxhash
+from numpy.typing import NDArray
+from sqlalchemy import Connection
+
+from tracker.errors import InputError
+from tracker.fleet.nameplate import Nameplate, thermal_parameters
+from tracker.store import fleet
+from tracker.store import readings as held_readings
+from tracker.store.blocks import (
+    HEADER_BYTES,
+    Float32Array,
+    month_of,
+    month_start_s,
+    step_of,
+    unpack,
+    values_a_month,
+)
+from tracker.store.fleet import Span, Stay
+from tracker.thermal.parameters import ThermalParameters
+
+#: Units whose profiles are held in memory at a time.
+UNITS_A_BATCH = 2_048
+
+WEATHER = "air_temp_c"
+
+
+@dataclass(frozen=True, slots=True)
+class Period:
+    """From a moment to a moment, both on the hour [s since 1970, UTC]."""
+
+    start_s: int
+    end_s: int
+
+    @property
+    def months(self) -> tuple[int, int]:
+        """First and last month it touches."""
+        return month_of(self.start_s), month_of(self.end_s - 1)
+
+    @property
+    def hours(self) -> float:
+        """Its length [h]."""
+        return (self.end_s - self.start_s) / 3600
+
+    @property
+    def starts_at(self) -> dt.datetime:
+        """Its beginning."""
+        return dt.datetime.fromtimestamp(self.start_s, dt.UTC)
+
+    @property
+    def ends_at(self) -> dt.datetime:
+        """Its end, excluded."""
+        return dt.datetime.fromtimestamp(self.end_s, dt.UTC)
+
+
+@dataclass(frozen=True, slots=True)
+class FleetPlan:
+    """Who stood where in a period, and which weather held there."""
+
+    period: Period
+    units: Sequence[Mapping[str, Any]]  #: by unit id
+    stays: Mapping[int, Sequence[Stay]]  #: placements in the period, by unit key
+    station_of_site: Mapping[int, int | None]  #: series key; None where no station is known
+    stations: Sequence[int]  #: series keys, the rows of the air temperatures
+
+
+@dataclass(frozen=True, slots=True)
+class Profiles:
+    """Units of one step, ready for the thermal model."""
+
+    unit_keys: list[int]
+    site_keys: list[int | None]  #: where each unit stood last in the period
+    expected_h: NDArray[np.float64]  #: hours of the period that each unit stood somewhere
+    parameters: ThermalParameters
+    load_kva: Float32Array  #: shape (n_unit, n_time)
+    air_temp_c: Float32Array  #: shape (n_station, n_time)
+    station_index: NDArray[np.int64]
+    step_min: int
+    start_s: int
+
+
+class Fingerprint:
+    """A checksum of all data that figures were made from, of the blocks' own checksums."""
+
+    def __init__(self) -> None:
+        self._digest = xxhash.xxh3_128()
+
+    def add_blocks(self, payloads: Iterable[bytes]) -> None:
+        """Take blocks in."""
+        self._digest.update(b"".join(payload[:HEADER_BYTES] for payload in payloads))
+
+    def add_text(self, text: str) -> None:
+        """Take a nameplate or a placement in."""
+        self._digest.update(text.encode())
+
+    def __str__(self) -> str:
+        return self._digest.hexdigest()
+
+
+# --- The period -----------------------------------------------------------------------------------
+
+
+def data_period(connection: Connection) -> Period:
+    """Return the hours from the first known load of any site to the last.
+
+    Raises
+    ------
+    InputError
+        If no load is held at all.
+    """
+    months = held_readings.site_load_months(connection)
+    if months is None:
+        raise InputError(
+            "the store holds no load of any site. Import units, connections and loads first."
+        )
+    first_s = min(_known_seconds(connection, months[0]))
+    last_s = max(_known_seconds(connection, months[1]))
+    return Period(first_s // 3600 * 3600, -(-last_s // 3600) * 3600)
+
+
+def _known_seconds(connection: Connection, month: int) -> Iterator[int]:
+    """Yield start and end of what is known of each site in a month."""
+    rows = held_readings.site_load_blocks(connection, None, (month, month))
+    for same in _of_equal_length(rows):
+        payloads = [payload for _, _, payload in same]
+        step_s = 60 * step_of(payloads[0])
+        known = np.flatnonzero(unpack(payloads)[1].any(axis=0))
+        yield month_start_s(month) + int(known[0]) * step_s
+        yield month_start_s(month) + int(known[-1] + 1) * step_s
+
+
+def chosen_period(
+    connection: Connection, starts_at: dt.datetime | None, ends_at: dt.datetime | None
+) -> Period:
+    """Return the period of all data, or the part of it between two moments.
+
+    Raises
+    ------
+    InputError
+        If nothing is left of it, or a moment is not on the hour.
+    """
+    held = data_period(connection)
+    start_s = held.start_s if starts_at is None else max(held.start_s, _on_the_hour(starts_at))
+    end_s = held.end_s if ends_at is None else min(held.end_s, _on_the_hour(ends_at))
+    if start_s >= end_s:
+        raise InputError(
+            f"no load is held in the period asked for; the store holds {held.starts_at:%Y-%m-%d %H:%M} "
+            f"to {held.ends_at:%Y-%m-%d %H:%M} UTC."
+        )
+    return Period(start_s, end_s)
+
+
+def _on_the_hour(moment: dt.datetime) -> int:
+    seconds = int(moment.timestamp())
+    if seconds % 3600:
+        raise InputError(f"{moment.isoformat()} is not on the hour in UTC. Name a full hour.")
+    return seconds
+
+
+# --- The plan -------------------------------------------------------------------------------------
+
+
+def fleet_plan(connection: Connection, period: Period, unit_id: str | None = None) -> FleetPlan:
+    """Look up who stood where in a period; of one unit, when one is named."""
+    units = [
+        unit for unit in fleet.units(connection) if unit_id is None or unit["unit_id"] == unit_id
+    ]
+    wanted = {unit["id"] for unit in units}
+    whole = Span(period.starts_at, period.ends_at)
+    stays: dict[int, list[Stay]] = {}
+    for stay in fleet.placements(connection):
+        if stay.who in wanted and stay.span.overlaps(whole):
+            stays.setdefault(stay.who, []).append(stay)
+    stations = fleet.stations(connection)
+    only = next(iter(stations.values())) if len(stations) == 1 else None
+    station_of_site = {
+        site["id"]: stations.get(site["weather_station"]) if site["weather_station"] else only
+        for site in fleet.sites(connection)
+    }
+    return FleetPlan(period, units, stays, station_of_site, list(stations.values()))
+
+
+# --- The profiles ---------------------------------------------------------------------------------
+
+
+def profiles(
+    connection: Connection, plan: FleetPlan, fingerprint: Fingerprint | None = None
+) -> Iterator[Profiles]:
+    """Yield the profiles of a fleet, a batch of units of one step at a time.
+
+    Parameters
+    ----------
+    fingerprint : Fingerprint, optional
+        Takes in all data on the way.
+    """
+    fingerprint = fingerprint or Fingerprint()
+    weather = _Weather(connection, plan, fingerprint)
+    for units in held_readings.in_parts(plan.units, UNITS_A_BATCH):
+        for unit in units:
+            fingerprint.add_text(repr((sorted(unit.items()), plan.stays.get(unit["id"]))))
+        yield from _batch(connection, plan, units, weather, fingerprint)
+
+
+def _batch(
+    connection: Connection,
+    plan: FleetPlan,
+    units: Sequence[Mapping[str, Any]],
+    weather: _Weather,
+    fingerprint: Fingerprint,
+) -> Iterator[Profiles]:
+    sites = sorted({stay.site_key for unit in units for stay in plan.stays.get(unit["id"], ())})
+    rows = list(held_readings.site_load_blocks(connection, sites, plan.period.months))
+    fingerprint.add_blocks(payload for _, _, payload in rows)
+    site_step: dict[int, int] = {}
+    for site, _, payload in rows:
+        site_step[site] = math.gcd(site_step.get(site, 0), step_of(payload))
+    by_step: dict[int, list[Mapping[str, Any]]] = {}
+    for unit in units:
+        stays = plan.stays.get(unit["id"], ())
+        steps = [site_step.get(stay.site_key, 0) for stay in stays]
+        steps += [weather.step_of(plan.station_of_site[stay.site_key]) for stay in stays]
+        by_step.setdefault(math.gcd(*steps) or 60, []).append(unit)
+    for step_min, members in sorted(by_step.items()):
+        yield _profiles(plan, members, rows, weather, step_min)
+
+
+def _profiles(
+    plan: FleetPlan,
+    units: Sequence[Mapping[str, Any]],
+    rows: Sequence[tuple[int, int, bytes]],
+    weather: _Weather,
+    step_min: int,
+) -> Profiles:
+    stays = [plan.stays.get(unit["id"], ()) for unit in units]
+    site_of_row = [
+        own[0].site_key if len(own) == 1 and _covers(own[0].span, plan.period) else None
+        for own in stays
+    ]
+    load = np.full((len(units), _n_time(plan.period, step_min)), np.nan, dtype=np.float32)
+    # A unit that stood at one site all the time is filled in place; others are pieced together.
+    place = {site: row for row, site in enumerate(site_of_row) if site is not None}
+    _fill(load, rows, place, plan.period, step_min)
+    pieced = [row for row, site in enumerate(site_of_row) if site is None and stays[row]]
+    for row in pieced:
+        _piece_together(load[row], stays[row], rows, plan.period, step_min)
+    air, station_index = weather.of_units(plan, stays, step_min)
+    return Profiles(
+        [unit["id"] for unit in units],
+        [own[-1].site_key if own else None for own in stays],
+        np.array([_hours(own, plan.period) for own in stays]),
+        thermal_parameters(_nameplate(unit) for unit in units),
+        load,
+        air,
+        station_index,
+        step_min,
+        plan.period.start_s,
+    )
+
+
+def _nameplate(unit: Mapping[str, Any]) -> Nameplate:
+    return Nameplate(**{name: unit[name] for name in fleet.NAMEPLATE_COLUMNS})
+
+
+def _n_time(period: Period, step_min: int) -> int:
+    return (period.end_s - period.start_s) // (60 * step_min)
+
+
+def _covers(span: Span, period: Period) -> bool:
+    return (span.starts_at is None or span.starts_at <= period.starts_at) and (
+        span.ends_at is None or span.ends_at >= period.ends_at
+    )
+
+
+def _part_of(span: Span, period: Period) -> tuple[int, int]:
+    """Return the seconds of a period that a span covers: from, to."""
+    start_s = int(span.starts_at.timestamp()) if span.starts_at else period.start_s
+    end_s = int(span.ends_at.timestamp()) if span.ends_at else period.end_s
+    return max(start_s, period.start_s), min(end_s, period.end_s)
+
+
+def _hours(stays: Sequence[Stay], period: Period) -> float:
+    parts = [_part_of(stay.span, period) for stay in stays]
+    return sum(end_s - start_s for start_s, end_s in parts) / 3600
+
+
+def _of_equal_length(
+    rows: Iterable[tuple[int, int, bytes]],
+) -> Iterator[list[tuple[int, int, bytes]]]:
+    """Group blocks that can be unpacked side by side: of one month and length."""
+    groups: dict[tuple[int, int], list[tuple[int, int, bytes]]] = {}
+    for row in rows:
+        groups.setdefault((row[1], len(row[2])), []).append(row)
+    yield from groups.values()
+
+
+def _fill(
+    room: Float32Array,
+    rows: Iterable[tuple[int, int, bytes]],
+    place: Mapping[int, int],
+    period: Period,
+    step_min: int,
+) -> None:
+    """Unpack blocks into the rows that `place` gives their keys; others are passed over."""
+    step_s = 60 * step_min
+    for same in _of_equal_length(row for row in rows if row[0] in place):
+        month, payload = same[0][1], same[0][2]
+        values, _ = unpack([row[2] for row in same])
+        times = step_of(payload) // step_min
+        if times > 1:
+            values = np.repeat(values, times, axis=1)
+        first = (month_start_s(month) - period.start_s) // step_s
+        start, stop = max(first, 0), min(first + values_a_month(month, step_min), room.shape[1])
+        targets = [place[row[0]] for row in same]
+        room[targets, start:stop] = values[:, start - first : stop - first]
+
+
+def _piece_together(
+    load: Float32Array,
+    stays: Sequence[Stay],
+    rows: Sequence[tuple[int, int, bytes]],
+    period: Period,
+    step_min: int,
+) -> None:
+    """Put the load of each site where the unit stood there."""
+    step_s = 60 * step_min
+    for stay in stays:
+        whole = np.full((1, len(load)), np.nan, dtype=np.float32)
+        _fill(whole, rows, {stay.site_key: 0}, period, step_min)
+        start_s, end_s = _part_of(stay.span, period)
+        part = slice(
+            -(-(start_s - period.start_s) // step_s), -(-(end_s - period.start_s) // step_s)
+        )
+        load[part] = whole[0, part]
+
+
+class _Weather:
+    """Air temperatures of all stations of a plan, at any step."""
+
+    def __init__(self, connection: Connection, plan: FleetPlan, fingerprint: Fingerprint) -> None:
+        self._rows = held_readings.series_blocks(
+            connection, plan.stations, WEATHER, plan.period.months
+        )
+        fingerprint.add_blocks(payload for _, _, payload in self._rows)
+        self._row_of = {station: row for row, station in enumerate(plan.stations)}
+        self._period = plan.period
+        self._steps: dict[int, int] = {}
+        for station, _, payload in self._rows:
+            self._steps[station] = math.gcd(self._steps.get(station, 0), step_of(payload))
+        self._made: dict[int, Float32Array] = {}
+
+    def step_of(self, station: int | None) -> int:
+        """Return the step of a station [min]; 0 where nothing is known of it."""
+        return 0 if station is None else self._steps.get(station, 0)
+
+    def _air(self, step_min: int) -> Float32Array:
+        """Return all stations at a step, and a last row without any temperature."""
+        if step_min not in self._made:
+            shape = (len(self._row_of) + 1, _n_time(self._period, step_min))
+            air = np.full(shape, np.nan, dtype=np.float32)
+            usable = [row for row in self._rows if self._steps[row[0]] % step_min == 0]
+            _fill(air, usable, self._row_of, self._period, step_min)
+            self._made[step_min] = air
+        return self._made[step_min]
+
+    def of_units(
+        self, plan: FleetPlan, stays: Sequence[Sequence[Stay]], step_min: int
+    ) -> tuple[Float32Array, NDArray[np.int64]]:
+        """Return air temperatures, and the row of each unit."""
+        air = self._air(step_min)
+        nowhere = len(self._row_of)
+        index = np.full(len(stays), nowhere, dtype=np.int64)
+        own_air: list[Float32Array] = []
+        for row, own in enumerate(stays):
+            stations = [plan.station_of_site[stay.site_key] for stay in own]
+            rows = [nowhere if each is None else self._row_of[each] for each in stations]
+            if len(set(rows)) == 1:
+                index[row] = rows[0]
+            elif rows:  # the unit moved from one station's weather into another's
+                index[row] = len(air) + len(own_air)
+                own_air.append(self._pieced(air, own, rows, step_min))
+        return np.vstack([air, *own_air]) if own_air else air, index
+
+    def _pieced(
+        self, air: Float32Array, stays: Sequence[Stay], rows: Sequence[int], step_min: int
+    ) -> Float32Array:
+        pieced = np.full(air.shape[1], np.nan, dtype=np.float32)
+        for stay, row in zip(stays, rows, strict=True):
+            start_s, end_s = _part_of(stay.span, self._period)
+            start, stop = (
+                -(-(s - self._period.start_s) // (60 * step_min)) for s in (start_s, end_s)
+            )
+            pieced[start:stop] = air[row, start:stop]
+        return pieced

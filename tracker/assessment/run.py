@@ -1,0 +1,161 @@
+"""An assessment: the thermal model over the fleet, its figures stored."""
+
+from __future__ import annotations
+
+import datetime as dt
+from collections.abc import Callable, Iterator
+from dataclasses import asdict, dataclass
+from typing import Any
+
+import numpy as np
+
+import tracker
+from tracker.assessment.profiles import (
+    Fingerprint,
+    Period,
+    Profiles,
+    chosen_period,
+    fleet_plan,
+    profiles,
+)
+from tracker.settings import WARM_UP_H, AssessmentSettings
+from tracker.store import results
+from tracker.store.engine import Database
+from tracker.thermal import FleetFigures, equivalent_aging_factor, loss_of_life_pct
+from tracker.thermal.kernel import assess_fleet
+
+
+@dataclass(frozen=True, slots=True)
+class AssessmentSummary:
+    """What an assessment found, in a few numbers."""
+
+    key: int
+    period: Period
+    settings: AssessmentSettings
+    units: int
+    units_without_figures: int
+    units_over_rating: int
+    units_over_hot_spot_limit: int
+    units_aging_faster_than_normal: int
+
+
+def assess(
+    database: Database,
+    settings: AssessmentSettings | None = None,
+    *,
+    starts_at: dt.datetime | None = None,
+    ends_at: dt.datetime | None = None,
+    on_progress: Callable[[float], None] | None = None,
+) -> AssessmentSummary:
+    """Run the thermal model over every unit and store the figures.
+
+    Parameters
+    ----------
+    starts_at, ends_at : datetime, optional
+        The part of the data to assess; all of it unless said.
+    on_progress : callable, optional
+        Told the share of units done, 0 to 1.
+
+    Raises
+    ------
+    InputError
+        If no load is held in the period.
+    """
+    settings = settings or AssessmentSettings()
+    with database.reading() as connection:
+        period = chosen_period(connection, starts_at, ends_at)
+        plan = fleet_plan(connection, period)
+        fingerprint = Fingerprint()
+        rows: list[dict[str, Any]] = []
+        for batch in profiles(connection, plan, fingerprint):
+            rows += _rows(batch, _figures(batch, settings), settings, period)
+            if on_progress:
+                on_progress(len(rows) / len(plan.units))
+    with database.writing() as connection:
+        key = results.add_assessment(
+            connection,
+            made_at=dt.datetime.now(dt.UTC),
+            program_version=tracker.__version__,
+            settings=asdict(settings),
+            starts_at=period.starts_at,
+            ends_at=period.ends_at,
+            data_fingerprint=str(fingerprint),
+        )
+        results.add_results(connection, [{"assessment_key": key, **row} for row in rows])
+    return _summary(key, period, settings, rows)
+
+
+def _figures(batch: Profiles, settings: AssessmentSettings) -> FleetFigures:
+    return assess_fleet(
+        batch.load_kva,
+        batch.air_temp_c,
+        batch.station_index,
+        batch.parameters,
+        batch.step_min / 60,
+        hot_spot_limit_c=settings.hot_spot_limit_c,
+        time_constant=settings.time_constant,
+    )
+
+
+def _rows(
+    batch: Profiles, figures: FleetFigures, settings: AssessmentSettings, period: Period
+) -> Iterator[dict[str, Any]]:
+    """Turn figures into rows of the results table."""
+    counted_h = figures.counted_hours
+    known = counted_h > 0
+    expected_h = np.maximum(batch.expected_h - WARM_UP_H, 0.0)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        coverage_pct = np.where(expected_h > 0, 100.0 * counted_h / expected_h, 0.0)
+    step_s = 60 * batch.step_min
+    columns: dict[str, Any] = {
+        "peak_load_pct": 100.0 * figures.peak_load_pu,
+        "peak_hot_spot_c": figures.peak_hot_spot_c,
+        "peak_top_oil_c": figures.peak_top_oil_c,
+        "hours_over_rating": figures.hours_over_rating,
+        "hours_over_hot_spot_limit": figures.hours_over_hot_spot_limit,
+        "aging_hours": figures.aging_hours,
+        "aging_factor": equivalent_aging_factor(
+            figures.aging_hours, np.where(known, counted_h, np.nan)
+        ),
+        "life_used_pct": np.where(
+            known, loss_of_life_pct(figures.aging_hours, settings.life_h), np.nan
+        ),
+        "counted_hours": counted_h,
+        "coverage_pct": coverage_pct,
+        "end_top_oil_rise_k": figures.state.top_oil_rise_k,
+        "end_hot_spot_gradient_k": figures.state.hot_spot_gradient_k,
+        "end_last_load_pu": figures.state.last_load_pu,
+        "end_hole_h": figures.state.hole_h,
+        "end_warm_up_left_h": figures.state.warm_up_left_h,
+    }
+    lists = [_or_none(values) for values in columns.values()]
+    for unit_key, site_key, index, *values in zip(
+        batch.unit_keys, batch.site_keys, figures.peak_hot_spot_index.tolist(), *lists, strict=True
+    ):
+        peak_at = batch.start_s + index * step_s
+        yield {
+            "unit_key": unit_key,
+            "site_key": site_key,
+            "peak_hot_spot_at": dt.datetime.fromtimestamp(peak_at, dt.UTC) if index >= 0 else None,
+            "end_at": period.ends_at,
+            **dict(zip(columns, values, strict=True)),
+        }
+
+
+def _or_none(values: Any) -> list[float | None]:
+    return [None if value != value else value for value in np.asarray(values).tolist()]  # noqa: PLR0124 - NaN
+
+
+def _summary(
+    key: int, period: Period, settings: AssessmentSettings, rows: list[dict[str, Any]]
+) -> AssessmentSummary:
+    return AssessmentSummary(
+        key,
+        period,
+        settings,
+        units=len(rows),
+        units_without_figures=sum(row["peak_hot_spot_c"] is None for row in rows),
+        units_over_rating=sum(row["hours_over_rating"] > 0 for row in rows),
+        units_over_hot_spot_limit=sum(row["hours_over_hot_spot_limit"] > 0 for row in rows),
+        units_aging_faster_than_normal=sum((row["aging_factor"] or 0) > 1 for row in rows),
+    )
