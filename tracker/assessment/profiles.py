@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import datetime as dt
 import math
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -174,10 +174,12 @@ def _on_the_hour(moment: dt.datetime) -> int:
 # --- The plan -------------------------------------------------------------------------------------
 
 
-def fleet_plan(connection: Connection, period: Period, unit_id: str | None = None) -> FleetPlan:
-    """Look up who stood where in a period; of one unit, when one is named."""
+def fleet_plan(
+    connection: Connection, period: Period, unit_ids: Collection[str] | None = None
+) -> FleetPlan:
+    """Look up who stood where in a period; of some units, when they are named."""
     units = [
-        unit for unit in fleet.units(connection) if unit_id is None or unit["unit_id"] == unit_id
+        unit for unit in fleet.units(connection) if unit_ids is None or unit["unit_id"] in unit_ids
     ]
     wanted = {unit["id"] for unit in units}
     whole = Span(period.starts_at, period.ends_at)

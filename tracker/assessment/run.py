@@ -38,6 +38,30 @@ class AssessmentSummary:
     units_over_hot_spot_limit: int
     units_aging_faster_than_normal: int
 
+    def as_json(self) -> dict[str, Any]:
+        """Return it for scripts."""
+        return {
+            "assessment": self.key,
+            "starts_at": self.period.starts_at,
+            "ends_at": self.period.ends_at,
+            "settings": asdict(self.settings),
+            "units": self.units,
+            "units_without_figures": self.units_without_figures,
+            "units_over_rating": self.units_over_rating,
+            "units_over_hot_spot_limit": self.units_over_hot_spot_limit,
+            "units_aging_faster_than_normal": self.units_aging_faster_than_normal,
+        }
+
+    def __str__(self) -> str:
+        return (
+            f"{self.units:,} units from {self.period.starts_at:%Y-%m-%d %H:%M} to "
+            f"{self.period.ends_at:%Y-%m-%d %H:%M} UTC: "
+            f"{self.units_over_hot_spot_limit:,} over {self.settings.hot_spot_limit_c:g} °C, "
+            f"{self.units_aging_faster_than_normal:,} aging faster than normal, "
+            f"{self.units_over_rating:,} over their rating, "
+            f"{self.units_without_figures:,} without figures"
+        )
+
 
 def assess(
     database: Database,

@@ -63,7 +63,7 @@ def unit_trace(
         if settings is None:
             settings = AssessmentSettings(**latest.settings) if latest else AssessmentSettings()
         period = chosen_period(connection, run_from, ends_at)
-        plan = fleet_plan(connection, period, record.unit_id)
+        plan = fleet_plan(connection, period, {record.unit_id})
         (batch,) = profiles(connection, plan)
     air = batch.air_temp_c[batch.station_index].astype(np.float64)
     trace = simulate(

@@ -312,3 +312,10 @@ def series_blocks(
         )
         rows += [(row[0], row[1], row[2]) for row in connection.execute(query)]
     return rows
+
+
+def reading_months(connection: Connection) -> list[int]:
+    """Return the months that any reading is held of."""
+    return list(
+        connection.scalars(select(ReadingBlock.month).distinct().order_by(ReadingBlock.month))
+    )

@@ -175,6 +175,11 @@ def files_since(connection: Connection, made_at: dt.datetime) -> int:
     return connection.scalar(query) or 0
 
 
+def has_units(connection: Connection) -> bool:
+    """Say whether the store holds any unit, assessed or not."""
+    return connection.scalar(select(Unit.id).limit(1)) is not None
+
+
 def feeders(connection: Connection) -> list[str]:
     """Return the feeders of the fleet, in order."""
     query = select(Site.feeder).where(Site.feeder.is_not(None)).distinct().order_by(Site.feeder)

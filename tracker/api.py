@@ -1,0 +1,152 @@
+"""The verbs of the command line for notebooks: pandas frames in and out."""
+
+from __future__ import annotations
+
+import datetime as dt
+from pathlib import Path
+from typing import Any
+
+import pandas as pd
+
+from tracker.assessment.run import AssessmentSummary, assess
+from tracker.assessment.trace import unit_trace
+from tracker.errors import InputError
+from tracker.intake.files import IntakeOptions, Kind, take_file
+from tracker.intake.readings import ReadingOptions
+from tracker.intake.report import FileReport
+from tracker.intake.stamps import zone_of
+from tracker.planning.priority import priority_list
+from tracker.reports.tables import trace_table
+from tracker.settings import AssessmentSettings
+from tracker.store.schema import open_database
+
+Given = Path | str | pd.DataFrame
+
+
+class TransformerStore:
+    """An open store. Use it as a context, or close it when done."""
+
+    def __init__(self, url: str) -> None:
+        self.database = open_database(url)
+
+    def __enter__(self) -> TransformerStore:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+    def close(self) -> None:
+        """Close the store."""
+        self.database.close()
+
+    def import_units(
+        self, given: Given, *, timezone: str | None = None, dry_run: bool = False
+    ) -> FileReport:
+        """Take in a register of units: a file or a frame with the headings of units.csv."""
+        return self._take("units", given, dry_run, timezone=timezone)
+
+    def import_connections(
+        self, given: Given, *, timezone: str | None = None, dry_run: bool = False
+    ) -> FileReport:
+        """Take in which meter hangs where: a file or a frame with the headings of connections.csv."""
+        return self._take("connections", given, dry_run, timezone=timezone)
+
+    def import_loads(
+        self,
+        given: Given,
+        *,
+        timezone: str | None = None,
+        stamps: str = "start",
+        interval: int | None = None,
+        power_factor: float | None = None,
+        quantity: str | None = None,
+        dry_run: bool = False,
+    ) -> FileReport:
+        """Take in interval readings.
+
+        Parameters
+        ----------
+        timezone : str, optional
+            IANA zone of stamps that have no offset.
+        stamps : {"start", "end"}
+            Which end of its interval a stamp marks.
+        interval : int, optional
+            Interval length [min]; found from the stamps unless said.
+        power_factor : float, optional
+            Turns kW into kVA; 0.95 unless said.
+        quantity : str, optional
+            What the cells of the layout with one row a day are; kwh unless said.
+        """
+        return self._take(
+            "loads",
+            given,
+            dry_run,
+            timezone=timezone,
+            stamps=stamps,
+            interval=interval,
+            power_factor=power_factor,
+            quantity=quantity,
+        )
+
+    def import_weather(
+        self,
+        given: Given,
+        *,
+        timezone: str | None = None,
+        stamps: str = "start",
+        interval: int | None = None,
+        dry_run: bool = False,
+    ) -> FileReport:
+        """Take in air temperatures: a file or a frame with the headings of weather.csv."""
+        return self._take(
+            "weather", given, dry_run, timezone=timezone, stamps=stamps, interval=interval
+        )
+
+    def _take(self, kind: Kind, given: Given, dry_run: bool, **options: Any) -> FileReport:
+        return take_file(self.database, kind, given, intake_options(**options), dry_run=dry_run)
+
+    def assess(
+        self,
+        settings: AssessmentSettings | None = None,
+        *,
+        starts_at: dt.datetime | None = None,
+        ends_at: dt.datetime | None = None,
+    ) -> AssessmentSummary:
+        """Run the thermal model over the fleet and store the figures."""
+        return assess(self.database, settings, starts_at=starts_at, ends_at=ends_at)
+
+    def ranking(self) -> pd.DataFrame:
+        """Return the replacement priority list, most urgent first."""
+        return priority_list(self.database)
+
+    def trace(
+        self,
+        unit_id: str,
+        *,
+        starts_at: dt.datetime | None = None,
+        ends_at: dt.datetime | None = None,
+    ) -> pd.DataFrame:
+        """Return one unit interval by interval."""
+        trace = unit_trace(self.database, unit_id, starts_at=starts_at, ends_at=ends_at)
+        return trace_table(trace)
+
+
+def intake_options(
+    *,
+    timezone: str | None = None,
+    stamps: str = "start",
+    interval: int | None = None,
+    power_factor: float | None = None,
+    quantity: str | None = None,
+) -> IntakeOptions:
+    """Check options as people give them.
+
+    Raises
+    ------
+    InputError
+        If one is out of range.
+    """
+    if stamps not in ("start", "end"):
+        raise InputError(f"stamps = {stamps!r} is not known; allowed: start, end.")
+    reading = ReadingOptions(zone_of(timezone), stamps == "end", interval, power_factor)
+    return IntakeOptions(reading, quantity)

@@ -1,0 +1,126 @@
+"""The replacement priority list: what to replace first, with what size, and why."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+import pandas as pd
+
+from tracker.assessment.profiles import Period
+from tracker.errors import InputError
+from tracker.planning.right_size import Candidate, suggested_ratings
+from tracker.settings import LEAST_COVERAGE_PCT, AssessmentSettings
+from tracker.store import fleet
+from tracker.store.engine import Database
+from tracker.store.results import AssessmentRow, latest_assessment, ranking_page
+
+#: Columns of the list that others rely on, in this order; others may follow.
+PRIORITY_COLUMNS = (
+    "rank",
+    "unit_id",
+    "site_id",
+    "feeder",
+    "rated_kva",
+    "peak_load_pct",
+    "peak_hot_spot_c",
+    "peak_hot_spot_at",
+    "peak_top_oil_c",
+    "hours_over_rating",
+    "hours_over_hot_spot_limit",
+    "aging_factor",
+    "life_used_pct",
+    "coverage_pct",
+    "suggested_kva",
+    "reasons",
+)
+
+_OVER_LIMIT, _AGING_FAST, _OVER_RATING, _WITHIN, _THIN_DATA, _NO_DATA = range(6)
+
+
+def priority_list(database: Database) -> pd.DataFrame:
+    """Order the fleet of the newest assessment by what to replace first.
+
+    First come units over the hot-spot limit, then units aging faster than normal, then units over
+    their rating, then the rest; within each, the fastest aging first, and ties by unit id. Units
+    whose data cover too little of the period are ranked after all others.
+
+    Returns
+    -------
+    DataFrame
+        Columns `PRIORITY_COLUMNS`, one row a unit, rank 1 the most urgent.
+
+    Raises
+    ------
+    InputError
+        If there is no assessment yet.
+    """
+    with database.reading() as connection:
+        assessment = latest_assessment(connection)
+        if assessment is None:
+            raise InputError("no assessment is held yet. Run `tracker assess` first.")
+        rows = ranking_page(connection, assessment.key).rows
+        limit_c = float(assessment.settings["hot_spot_limit_c"])
+        urgency = {row["unit_id"]: _urgency(row) for row in rows}
+        unfit = [row["unit_id"] for row in rows if _is_unfit(row, limit_c)]
+        nameplates = {unit["unit_id"]: unit for unit in fleet.units(connection)}
+        candidates = [
+            Candidate(unit_id, nameplates[unit_id]["phases"] or 1, nameplates[unit_id]["cooling"])
+            for unit_id in unfit
+        ]
+        suggested = suggested_ratings(
+            connection, candidates, _period(assessment), AssessmentSettings(**assessment.settings)
+        )
+    rows.sort(
+        key=lambda row: (urgency[row["unit_id"]], -(row["aging_factor"] or 0.0), row["unit_id"])
+    )
+    for rank, row in enumerate(rows, start=1):
+        unit_id = row["unit_id"]
+        row["rank"] = rank
+        row["suggested_kva"] = suggested.get(unit_id)
+        row["reasons"] = _reasons(row, limit_c, too_large=suggested.get(unit_id, 0.0) is None)
+    return pd.DataFrame(rows, columns=list(PRIORITY_COLUMNS))
+
+
+def _period(assessment: AssessmentRow) -> Period:
+    return Period(int(assessment.starts_at.timestamp()), int(assessment.ends_at.timestamp()))
+
+
+def _is_unfit(row: Mapping[str, Any], limit_c: float) -> bool:
+    """Say whether a unit is over the hot-spot limit or ages faster than normal."""
+    return (row["peak_hot_spot_c"] or 0.0) > limit_c or (row["aging_factor"] or 0.0) > 1.0
+
+
+def _urgency(row: Mapping[str, Any]) -> int:
+    if row["peak_hot_spot_c"] is None:
+        return _NO_DATA
+    if row["coverage_pct"] < LEAST_COVERAGE_PCT:
+        return _THIN_DATA
+    if row["hours_over_hot_spot_limit"] > 0:
+        return _OVER_LIMIT
+    if row["aging_factor"] > 1.0:
+        return _AGING_FAST
+    return _OVER_RATING if row["hours_over_rating"] > 0 else _WITHIN
+
+
+def _reasons(row: Mapping[str, Any], limit_c: float, *, too_large: bool) -> str:
+    """Say in plain words why a unit stands where it stands."""
+    if row["peak_hot_spot_c"] is None:
+        return "no load or no air temperature is known: cannot be judged"
+    reasons = []
+    if row["coverage_pct"] < LEAST_COVERAGE_PCT:
+        reasons.append(f"ranked apart: data cover only {row['coverage_pct']:.0f} % of the period")
+    if row["hours_over_hot_spot_limit"] > 0:
+        reasons.append(
+            f"hot spot over {limit_c:g} °C for {row['hours_over_hot_spot_limit']:,.4g} h, "
+            f"up to {row['peak_hot_spot_c']:.0f} °C"
+        )
+    if row["aging_factor"] > 1.0:
+        reasons.append(f"insulation aging {row['aging_factor']:.3g} times as fast as normal")
+    if row["hours_over_rating"] > 0:
+        reasons.append(
+            f"over rating for {row['hours_over_rating']:,.4g} h, up to {row['peak_load_pct']:.0f} %"
+        )
+    if too_large:
+        reasons.append("no preferred rating is enough: divide the load")
+    return "; ".join(reasons) or "within limits"
