@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import asdict, dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
@@ -57,13 +58,10 @@ def take_file(
     """
     options = options or IntakeOptions()
     source = open_source(given)
-    with database.writing(keep=not dry_run) as connection:
+    with ThreadPoolExecutor(1) as beside, database.writing(keep=not dry_run) as connection:
+        fingerprint = beside.submit(source.fingerprint)
         file_key = ledger.open_entry(
-            connection,
-            kind=kind,
-            name=source.name,
-            fingerprint=source.fingerprint(),
-            options=_noted(options),
+            connection, kind=kind, name=source.name, options=_noted(options)
         )
         report = _TAKERS[kind](connection, source, file_key, options)
         refusals = [asdict(refusal) for refusal in report.refusals]
@@ -72,6 +70,7 @@ def take_file(
         ledger.close_entry(
             connection,
             file_key,
+            fingerprint=fingerprint.result(),
             taken=report.fates.taken,
             unchanged=report.fates.unchanged,
             corrected=report.fates.corrected,

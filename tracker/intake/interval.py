@@ -27,7 +27,7 @@ def found_intervals(
     step_min : int32, shape (n_series,)
         One of `INTERVALS_MIN`; 0 where no two neighbours tell.
     phase_min : int32, shape (n_series,)
-        Minute of the hour, modulo 60, on which most stamps fall.
+        Minute of the hour on which most stamps fall; -1 of a series without any.
 
     Examples
     --------
@@ -36,7 +36,8 @@ def found_intervals(
     (15, 0)
     """
     order = _by_series(series, n_series)
-    return _intervals(series, stamp_s, order, n_series)  # type: ignore[no-any-return]
+    step_min, phase_min = _intervals(series, stamp_s, order, n_series)
+    return step_min, phase_min
 
 
 @njit(cache=True, nogil=True)
@@ -57,7 +58,7 @@ def _by_series(series, n_series):  # type: ignore[no-untyped-def]
 def _intervals(series, stamp_s, order, n_series):  # type: ignore[no-untyped-def]
     lengths = np.array(INTERVALS_MIN, np.int32)
     step_min = np.zeros(n_series, np.int32)
-    phase_min = np.zeros(n_series, np.int32)
+    phase_min = np.full(n_series, -1, np.int32)
     counts = np.zeros(len(lengths), np.int64)
     phases = np.zeros(60, np.int64)
     at = 0

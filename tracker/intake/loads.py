@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
 
 import numpy as np
 import pyarrow as pa
@@ -12,6 +13,7 @@ from numpy.typing import NDArray
 from sqlalchemy import Connection
 
 from tracker.errors import IntakeError
+from tracker.intake.ahead import ahead
 from tracker.intake.readings import (
     MISSING_WORD,
     QUALITY_WORDS,
@@ -44,6 +46,9 @@ INTERVAL_HEADING = re.compile(r"h\d{1,3}|\d{1,2}:\d{2}(:\d{2})?", re.IGNORECASE)
 #: Interval columns of an ordinary day: interval length [min]. A day that has an hour more brings
 #: that hour's columns, blank on other days.
 DAY_COLUMNS = {24: 60, 48: 30, 72: 20, 96: 15, 144: 10, 288: 5}
+
+#: Batches decoded ahead while readings are merged; about one chunk of readings.
+BATCHES_AHEAD = 6
 
 LAYOUTS = (
     "meter_id (or unit_id), read_at and kwh, kw or kva; "
@@ -162,70 +167,99 @@ def take_long(source: Source, intake: ReadingsIntake, id_heading: str | None, va
     }
     stamps = StampReader(source.name, intake.options.timezone)
     ordinal = 0
-    for batch in source.batches(select):
-        rows = np.arange(ordinal, ordinal + len(batch), dtype=np.int64)
-        ordinal += len(batch)
-        good = np.ones(len(batch), dtype=np.bool_)
-        series = _series(intake, batch.column("id"), rows, good, id_heading)
-        first_s, second_s = _moments(intake, stamps, batch.column("stamp"), rows, good)
-        flags = _flags(intake, batch.column("quality"), rows, good)
-        values = _values(intake, batch, rows, good)
-        intake.add(Part(series, first_s, second_s, values, flags, rows).where(good))
+    decoded = (_decoded(batch, stamps) for batch in source.batches(select))
+    for batch in ahead(decoded, BATCHES_AHEAD):
+        rows = np.arange(ordinal, ordinal + len(batch.value), dtype=np.int64)
+        ordinal += len(rows)
+        good = np.ones(len(rows), dtype=np.bool_)
+        series = _series(intake, batch.names, rows, good, id_heading)
+        _refuse_stamps(intake, batch.stamps, batch.stamp_of, rows, good, "read_at")
+        flags = _flags(intake, batch.quality, rows, good)
+        _refuse_values(intake, batch.not_numbers, rows, good)
+        part = Part(series, batch.first_s, batch.second_s, batch.value, flags, rows)
+        intake.add(part.where(good))
 
 
-def _distinct(column: pa.Array) -> tuple[list[str | None], NDArray[np.int64]]:
-    """Return the distinct texts of a column, trimmed, None last, and the place of each row's."""
+@dataclass(frozen=True, slots=True)
+class _Texts:
+    """A column of text: its distinct texts, trimmed, None last, and the place of each row's."""
+
+    distinct: list[str | None]
+    place: NDArray[np.int32]
+
+
+@dataclass(frozen=True, slots=True)
+class _Batch:
+    """Rows of the long layout, their columns decoded."""
+
+    names: _Texts
+    stamps: StampTable  #: of the distinct stamps
+    stamp_of: NDArray[np.int32]  #: place of each row's stamp among them
+    first_s: NDArray[np.int64]
+    second_s: NDArray[np.int64]  #: `first_s` itself where no stamp means two moments
+    value: NDArray[np.float64]
+    not_numbers: dict[int, str]  #: what stands where a number should, by row
+    quality: _Texts | None
+
+
+def _decoded(batch: pa.RecordBatch, stamps: StampReader) -> _Batch:
+    """Decode a batch; done ahead of the rest of the work, in a thread of its own."""
+    bad = batch.column("bad")
+    wrong = np.flatnonzero(bad.is_valid().to_numpy(zero_copy_only=False)).tolist()
+    quality = batch.column("quality")
+    stamp = _texts(batch.column("stamp"))
+    table = stamps.read(stamp.distinct)
+    first_s = table.first_s[stamp.place]
+    twice = (table.first_s != table.second_s).any()
+    return _Batch(
+        _texts(batch.column("id")),
+        table,
+        stamp.place,
+        first_s,
+        table.second_s[stamp.place] if twice else first_s,
+        pc.fill_null(batch.column("value"), np.nan).to_numpy(zero_copy_only=False),
+        {row: bad[row].as_py() for row in wrong},
+        None if quality.null_count == len(quality) else _texts(quality),
+    )
+
+
+def _texts(column: pa.Array) -> _Texts:
     encoded = column.dictionary_encode()
     texts: list[str | None] = [text.strip() or None for text in encoded.dictionary.to_pylist()]
     places = pc.fill_null(encoded.indices, len(texts)).to_numpy(zero_copy_only=False)
-    return [*texts, None], places
+    return _Texts([*texts, None], places)
 
 
 def _series(
     intake: ReadingsIntake,
-    column: pa.Array,
+    names: _Texts,
     rows: NDArray[np.int64],
     good: NDArray[np.bool_],
     id_heading: str | None,
 ) -> NDArray[np.int32]:
-    names, places = _distinct(column)
     if id_heading is None:
         return np.full(len(rows), intake.place_of(""), dtype=np.int32)
-    codes = np.full(len(names), -1, dtype=np.int32)
-    for place, name in enumerate(names):
+    codes = np.full(len(names.distinct), -1, dtype=np.int32)
+    for place, name in enumerate(names.distinct):
         if name is not None and len(name) <= ID_LENGTH:
             codes[place] = intake.place_of(name)
-    series = codes[places]
     for place in np.flatnonzero(codes < 0).tolist():
-        lost = good & (places == place)
+        lost = good & (names.place == place)
         if lost.any():
             code, reason = (
                 ("id.blank", f"{id_heading} is blank")
-                if names[place] is None
+                if names.distinct[place] is None
                 else ("id.too_long", f"{id_heading} is longer than {ID_LENGTH} characters")
             )
             intake.refuse(rows[lost], id_heading, code, reason)
             good &= ~lost
-    return series
-
-
-def _moments(
-    intake: ReadingsIntake,
-    stamps: StampReader,
-    column: pa.Array,
-    rows: NDArray[np.int64],
-    good: NDArray[np.bool_],
-) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-    texts, places = _distinct(column)
-    table = stamps.read(texts)
-    _refuse_stamps(intake, table, places, rows, good, "read_at")
-    return table.first_s[places], table.second_s[places]
+    return codes[names.place]
 
 
 def _refuse_stamps(
     intake: ReadingsIntake,
     table: StampTable,
-    places: NDArray[np.int64],
+    places: NDArray[np.int32],
     rows: NDArray[np.int64],
     good: NDArray[np.bool_],
     heading: str,
@@ -239,18 +273,15 @@ def _refuse_stamps(
 
 def _flags(
     intake: ReadingsIntake,
-    column: pa.Array,
+    words: _Texts | None,
     rows: NDArray[np.int64],
     good: NDArray[np.bool_],
 ) -> NDArray[np.uint8]:
     flags = np.full(len(rows), Quality.HELD, dtype=np.uint8)
-    if column.null_count == len(column):
-        return flags
-    words, places = _distinct(column)
-    for place, word in enumerate(words):
-        if word is None:
+    for place, word in enumerate(words.distinct if words else ()):
+        if word is None or words is None:
             continue
-        here = places == place
+        here = words.place == place
         quality = QUALITY_WORDS.get(word.casefold())
         if quality is not None:
             flags[here] = quality
@@ -269,20 +300,17 @@ def _flags(
     return flags
 
 
-def _values(
+def _refuse_values(
     intake: ReadingsIntake,
-    batch: pa.RecordBatch,
+    not_numbers: Mapping[int, str],
     rows: NDArray[np.int64],
     good: NDArray[np.bool_],
-) -> NDArray[np.float64]:
-    values = pc.fill_null(batch.column("value"), np.nan).to_numpy(zero_copy_only=False)
-    bad = batch.column("bad")
-    if bad.null_count < len(bad):
-        heading = intake.rule.heading
-        for place in np.flatnonzero(good & bad.is_valid().to_numpy(zero_copy_only=False)).tolist():
-            intake.refuse([rows[place]], heading, *_why_no_number(heading, bad[place].as_py()))
-            good[place] = False
-    return np.asarray(values, dtype=np.float64)
+) -> None:
+    heading = intake.rule.heading
+    for row, text in not_numbers.items():
+        if good[row]:
+            intake.refuse([rows[row]], heading, *_why_no_number(heading, text))
+            good[row] = False
 
 
 def _why_no_number(heading: str, text: str) -> tuple[str, str]:
@@ -363,8 +391,9 @@ def _unfolded(
     bad = np.column_stack([text.is_valid().to_numpy(zero_copy_only=False) for text in texts])
     filled = np.isfinite(cells) | bad
     series = _series_of_days(intake, batch.column("id"), rows, good, filled, columns, id_heading)
-    dates, places = _distinct(batch.column("date"))
-    table = days.read_days(dates)
+    dates = _texts(batch.column("date"))
+    places = dates.place
+    table = days.read_days(dates.distinct)
     for place, (code, reason) in table.problems.items():
         lost = good & (places == place)
         _refuse_cells(intake, rows, filled & lost[:, np.newaxis], columns, code, reason)
@@ -387,10 +416,11 @@ def _unfolded(
     )
     kept = filled & ~bad & ~beyond & good[:, np.newaxis]
     row_of, _ = np.nonzero(kept)
+    start_s = stamp_s[kept]
     yield Part(
         series[row_of],
-        stamp_s[kept],
-        stamp_s[kept],
+        start_s,
+        start_s,
         cells[kept],
         np.full(len(row_of), Quality.HELD, dtype=np.uint8),
         rows[row_of],
@@ -406,15 +436,15 @@ def _series_of_days(
     columns: Sequence[str],
     id_heading: str,
 ) -> NDArray[np.int32]:
-    names, places = _distinct(column)
+    names = _texts(column)
     codes = np.array(
         [
             intake.place_of(name) if name is not None and len(name) <= ID_LENGTH else -1
-            for name in names
+            for name in names.distinct
         ],
         dtype=np.int32,
     )
-    series = codes[places]
+    series = codes[names.place]
     lost = series < 0
     _refuse_cells(
         intake,

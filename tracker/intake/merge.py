@@ -39,14 +39,22 @@ UNCHANGED, TAKEN, CORRECTED = 1, 2, 3
 class Readings:
     """Readings in file order; arrays of shape (n_reading,)."""
 
-    series: NDArray[np.int32]  #: place in the file's list of series keys
+    series: NDArray[np.int32]  #: place in the file's list of series
     start_s: NDArray[np.int64]  #: start of the interval [s since 1970, UTC]
     value: Float32Array  #: mean over the interval, in the unit of the quantity
     flags: FlagArray
-    step_min: NDArray[np.int32]  #: length of the interval [min]
 
     def __len__(self) -> int:
         return len(self.series)
+
+
+@dataclass(frozen=True, slots=True)
+class SeriesFacts:
+    """What is known of each series of a file; arrays of shape (n_series,)."""
+
+    key: NDArray[np.int64]  #: its key in the store
+    step_min: NDArray[np.int32]  #: length of its intervals [min]; 0 where it has no readings here
+    phase_min: NDArray[np.int32]  #: minute that its intervals begin on, below the step
 
 
 @dataclass(frozen=True, slots=True)
@@ -61,18 +69,12 @@ class _Group:
 
 
 def merge(
-    connection: Connection,
-    readings: Readings,
-    keys: NDArray[np.int64],
-    quantity: str,
-    file_key: int,
+    connection: Connection, readings: Readings, facts: SeriesFacts, quantity: str, file_key: int
 ) -> tuple[Fates, set[tuple[int, int]]]:
     """Write readings into their blocks.
 
     Parameters
     ----------
-    keys : int64, shape (n_series,)
-        Key in the store of each series of the file.
     quantity : str
         What the values are; one block holds one quantity.
     file_key : int
@@ -84,47 +86,47 @@ def merge(
     touched : set of (series key, month)
         The blocks that changed.
     """
-    split, reading_of = _on_the_grid(readings)
-    if not len(split):
+    if not len(readings):
         return Fates(), set()
-    fate = np.zeros(len(split), dtype=np.uint8)
-    order, groups = _grouped(split, keys)
+    readings, facts, first_part = _on_the_grid(readings, facts)
+    fate = np.zeros(len(readings), dtype=np.uint8)
+    order, groups = _grouped(readings, facts)
     touched: set[tuple[int, int]] = set()
     for month, members in _by_month(groups):
         for part in held_readings.in_parts(members, BLOCKS_A_BATCH):
-            touched |= _merge_month(connection, split, order, part, month, quantity, file_key, fate)
-    if reading_of is not None:
-        fate = np.maximum.reduceat(fate, reading_of)
+            touched |= _merge_month(
+                connection, readings, order, part, month, quantity, file_key, fate
+            )
+    if first_part is not None:
+        fate = np.maximum.reduceat(fate, first_part)
     counts = np.bincount(fate, minlength=4)
     return Fates(int(counts[TAKEN]), int(counts[UNCHANGED]), int(counts[CORRECTED])), touched
 
 
-def _on_the_grid(readings: Readings) -> tuple[Readings, NDArray[np.intp] | None]:
+def _on_the_grid(
+    readings: Readings, facts: SeriesFacts
+) -> tuple[Readings, SeriesFacts, NDArray[np.intp] | None]:
     """Split readings that do not begin on a multiple of their step, as in zones half an hour off.
 
-    Returns the readings and, when any was split, the place where the parts of each begin.
+    Returns the place where the parts of each reading begin, when any was split.
     """
-    offset_min = (readings.start_s // 60) % readings.step_min
-    if not offset_min.any():
-        return readings, None
-    grid_min = np.gcd(readings.step_min, offset_min.astype(np.int32))
-    n_part = readings.step_min // grid_min
+    if not facts.phase_min.any():
+        return readings, facts, None
+    grid_min = np.gcd(facts.step_min, facts.phase_min)
+    n_part = (facts.step_min // np.maximum(grid_min, 1))[readings.series]
     begin = np.concatenate(([0], np.cumsum(n_part)[:-1]))
     part = np.arange(n_part.sum()) - np.repeat(begin, n_part)
-    step = np.repeat(grid_min, n_part)
-    return (
-        Readings(
-            np.repeat(readings.series, n_part),
-            np.repeat(readings.start_s, n_part) + part * step.astype(np.int64) * 60,
-            np.repeat(readings.value, n_part),
-            np.repeat(readings.flags, n_part),
-            step,
-        ),
-        begin,
+    series = np.repeat(readings.series, n_part)
+    split = Readings(
+        series,
+        np.repeat(readings.start_s, n_part) + 60 * part * grid_min.astype(np.int64)[series],
+        np.repeat(readings.value, n_part),
+        np.repeat(readings.flags, n_part),
     )
+    return split, SeriesFacts(facts.key, grid_min, np.zeros_like(grid_min)), begin
 
 
-def _grouped(readings: Readings, keys: NDArray[np.int64]) -> tuple[NDArray[np.int64], list[_Group]]:
+def _grouped(readings: Readings, facts: SeriesFacts) -> tuple[NDArray[np.int64], list[_Group]]:
     """Sort readings by series and month, keeping the file's order within; list the stretches."""
     first = month_of(int(readings.start_s.min()))
     last = month_of(int(readings.start_s.max()))
@@ -132,16 +134,14 @@ def _grouped(readings: Readings, keys: NDArray[np.int64]) -> tuple[NDArray[np.in
     bounds = np.array(
         [month_start_s(month) for month in range(first + 1, last + 1)], dtype=np.int64
     )
-    order, starts, steps = _sort_by_group(
-        readings.series, readings.start_s, readings.step_min, bounds, len(keys)
-    )
+    order, starts = _sort_by_group(readings.series, readings.start_s, bounds, len(facts.key))
     groups = [
         _Group(
-            int(keys[group // n_month]),
+            int(facts.key[group // n_month]),
             first + group % n_month,
             int(starts[group]),
             int(starts[group + 1]),
-            int(steps[group]),
+            int(facts.step_min[group // n_month]),
         )
         for group in np.flatnonzero(np.diff(starts)).tolist()
     ]
@@ -149,26 +149,20 @@ def _grouped(readings: Readings, keys: NDArray[np.int64]) -> tuple[NDArray[np.in
 
 
 @njit(cache=True, nogil=True)
-def _sort_by_group(series, start_s, step_min, bounds, n_series):  # type: ignore[no-untyped-def]
-    """Counting sort, stable, by series and then month; the finest step of each group."""
+def _sort_by_group(series, start_s, bounds, n_series):  # type: ignore[no-untyped-def]
+    """Counting sort, stable, by series and then month."""
     n_month = len(bounds) + 1
     n = len(series)
     group = np.empty(n, np.int32)
     starts = np.zeros(n_series * n_month + 1, np.int64)
-    steps = np.zeros(n_series * n_month, np.int64)
     month = 0
     for i in range(n):
         while month > 0 and start_s[i] < bounds[month - 1]:
             month -= 1
         while month < n_month - 1 and start_s[i] >= bounds[month]:
             month += 1
-        g = series[i] * n_month + month
-        group[i] = g
-        starts[g + 1] += 1
-        a, b = steps[g], np.int64(step_min[i])
-        while b:
-            a, b = b, a % b
-        steps[g] = a
+        group[i] = series[i] * n_month + month
+        starts[group[i] + 1] += 1
     for g in range(n_series * n_month):
         starts[g + 1] += starts[g]
     following = starts[:-1].copy()
@@ -176,7 +170,7 @@ def _sort_by_group(series, start_s, step_min, bounds, n_series):  # type: ignore
     for i in range(n):
         order[following[group[i]]] = i
         following[group[i]] += 1
-    return order, starts, steps
+    return order, starts
 
 
 def _by_month(groups: Sequence[_Group]) -> Iterator[tuple[int, list[_Group]]]:
@@ -214,11 +208,10 @@ def _merge_month(
             readings.start_s,
             readings.value,
             readings.flags,
-            readings.step_min,
             order,
-            np.array([(group.start, group.stop) for group in members], dtype=np.int64),
+            np.array([(g.start, g.stop, g.step_min // step) for g in members], dtype=np.int64),
             month_start_s(month),
-            step,
+            60 * step,
             values,
             flags,
             former,
@@ -265,27 +258,29 @@ def _scatter(  # type: ignore[no-untyped-def]
     start_s,
     value,
     flag,
-    reading_step_min,
     order,
     stretches,
     month_s,
-    step_min,
+    step_s,
     values,
     flags,
     former,
     former_flags,
     fate,
 ):
-    """Put readings in their places, in file order, and note what became of each."""
+    """Put readings in their places, in file order, and note what became of each.
+
+    A stretch is (first, last + 1) in `order`, and how many places each of its readings fills.
+    """
     n_group = len(stretches)
     dirty = np.zeros(n_group, np.bool_)
     corrected = np.zeros(n_group, np.bool_)
     for g in range(n_group):
         for at in range(stretches[g, 0], stretches[g, 1]):
             i = order[at]
-            first = (start_s[i] - month_s) // (60 * step_min)
+            first = (start_s[i] - month_s) // step_s
             outcome = 1
-            for place in range(first, first + reading_step_min[i] // step_min):
+            for place in range(first, first + stretches[g, 2]):
                 if flags[g, place] == 0:
                     outcome = max(outcome, 2)
                 elif values[g, place] == value[i] and flags[g, place] == flag[i]:

@@ -7,12 +7,13 @@ from dataclasses import dataclass, field
 from zoneinfo import ZoneInfo
 
 import numpy as np
+from numba import njit
 from numpy.typing import NDArray
 from sqlalchemy import Connection
 
 from tracker.errors import InputError, IntakeError
 from tracker.intake.interval import INTERVALS_MIN, found_intervals
-from tracker.intake.merge import Readings, merge
+from tracker.intake.merge import Readings, SeriesFacts, merge
 from tracker.intake.report import Fates, Finding
 from tracker.store import readings as held_readings
 from tracker.store.blocks import Quality, step_of
@@ -63,7 +64,9 @@ class Part:
 
     series: NDArray[np.int32]  #: place in `ReadingsIntake.names`
     first_s: NDArray[np.int64]  #: stamp [s since 1970, UTC]
-    second_s: NDArray[np.int64]  #: the later moment a repeated local hour may mean
+    second_s: NDArray[
+        np.int64
+    ]  #: the later moment of a repeated local hour; `first_s` itself if none
     value: NDArray[np.float64]
     flags: NDArray[np.uint8]
     ordinal: NDArray[np.int64]
@@ -75,10 +78,11 @@ class Part:
         """Return the readings under the mask."""
         if mask.all():
             return self
+        first_s = self.first_s[mask]
         return Part(
             self.series[mask],
-            self.first_s[mask],
-            self.second_s[mask],
+            first_s,
+            first_s if self.second_s is self.first_s else self.second_s[mask],
             self.value[mask],
             self.flags[mask],
             self.ordinal[mask],
@@ -101,8 +105,7 @@ class ReadingsIntake:
     names: dict[str, int] = field(default_factory=dict)
     steps_found: set[int] = field(default_factory=set)
     _keys: list[int] = field(default_factory=list)
-    _steps: list[int] = field(default_factory=list)
-    _phases: list[int] = field(default_factory=list)
+    _steps: dict[int, int] = field(default_factory=dict)
     _parts: list[Part] = field(default_factory=list)
     _waiting: int = 0
     _repeats: dict[tuple[int, int], int] = field(default_factory=dict)
@@ -156,25 +159,29 @@ class ReadingsIntake:
         self._learn_keys()
         stamp_s = self._told_apart(part)
         step_min, phase_min = self._intervals(part.series, stamp_s)
-        off = ((stamp_s % 60) != 0) | ((stamp_s // 60 - phase_min) % step_min != 0)
-        off |= (phase_min % step_min) % FINEST_GRID_MIN != 0
-        if off.any():
+        self.steps_found.update(np.unique(step_min[step_min > 0]).tolist())
+        start_s, value, fits = _placed(
+            part.series,
+            stamp_s,
+            part.value,
+            step_min,
+            phase_min,
+            self.options.stamps_at_end,
+            self.rule.energy,
+        )
+        series, flags = part.series, part.flags
+        if not fits.all():
             self.refuse(
-                part.ordinal[off],
+                part.ordinal[~fits],
                 "read_at",
                 "stamp.off_grid",
                 "the time does not fit the series' regular intervals; check it, or give --interval",
             )
-            part, stamp_s, step_min = part.where(~off), stamp_s[~off], step_min[~off]
-        self.steps_found.update(np.unique(step_min).tolist())
-        if self.options.stamps_at_end:
-            stamp_s = stamp_s - 60 * step_min.astype(np.int64)
-        value = part.value * (60.0 / step_min) if self.rule.energy else part.value
-        readings = Readings(part.series, stamp_s, value.astype(np.float32), part.flags, step_min)
+            series, start_s, value, flags = series[fits], start_s[fits], value[fits], flags[fits]
         fates, touched = merge(
             self.connection,
-            readings,
-            np.array(self._keys, dtype=np.int64),
+            Readings(series, start_s, value, flags),
+            SeriesFacts(np.array(self._keys, dtype=np.int64), step_min, phase_min),
             self.rule.stored_as,
             self.file_key,
         )
@@ -185,14 +192,12 @@ class ReadingsIntake:
         new = list(self.names)[len(self._keys) :]
         keys = held_readings.series_keys(self.connection, self.kind, new)
         self._keys += [keys[name] for name in new]
-        self._steps += [0] * len(new)
-        self._phases += [0] * len(new)
 
     def _told_apart(self, part: Part) -> NDArray[np.int64]:
         """Tell the two passes of a repeated local hour apart by their order in the file."""
-        twice = np.flatnonzero(part.second_s != part.first_s)
-        if not len(twice):
+        if part.second_s is part.first_s:
             return part.first_s
+        twice = np.flatnonzero(part.second_s != part.first_s)
         stamp_s = part.first_s.copy()
         for i in twice.tolist():
             which = (int(part.series[i]), int(part.first_s[i]))
@@ -205,26 +210,19 @@ class ReadingsIntake:
     def _intervals(
         self, series: NDArray[np.int32], stamp_s: NDArray[np.int64]
     ) -> tuple[NDArray[np.int32], NDArray[np.int32]]:
-        """Return step and phase [min] of each reading's series."""
-        found, phases = found_intervals(series, stamp_s, len(self._keys))
-        steps = np.array(self._steps, dtype=np.int32)
-        known_phases = np.array(self._phases, dtype=np.int32)
+        """Return step and phase [min] of each series; 0 of those without a reading here."""
+        steps, phases = found_intervals(series, stamp_s, len(self._keys))
+        here = phases >= 0
         if self.options.interval_min is not None:
-            found[:] = self.options.interval_min
-        here = np.zeros(len(steps), dtype=np.bool_)
-        here[series] = True
-        told = here & (found > 0)
-        steps[told], known_phases[told] = found[told], phases[told]
+            steps[here] = self.options.interval_min
         for place in np.flatnonzero(here & (steps == 0)).tolist():
             held = held_readings.any_block(self.connection, self._keys[place])
-            steps[place] = step_of(held) if held is not None else 0
-            known_phases[place] = phases[place]
+            steps[place] = self._steps.get(place) or (step_of(held) if held is not None else 0)
         unknown = here & (steps == 0)
         if unknown.any():
             steps[unknown] = self._commonest(steps)
-            known_phases[unknown] = phases[unknown]
-        self._steps, self._phases = steps.tolist(), known_phases.tolist()
-        return steps[series], known_phases[series]
+        self._steps.update((place, int(steps[place])) for place in np.flatnonzero(here).tolist())
+        return steps, np.where(here, phases % np.maximum(steps, 1), 0).astype(np.int32)
 
     def _commonest(self, steps: NDArray[np.int32]) -> int:
         known = steps[steps > 0]
@@ -239,14 +237,38 @@ class ReadingsIntake:
 def _joined(parts: Sequence[Part]) -> Part:
     if len(parts) == 1:
         return parts[0]
+    first_s = np.concatenate([part.first_s for part in parts])
+    told = all(part.second_s is part.first_s for part in parts)
     return Part(
         np.concatenate([part.series for part in parts]),
-        np.concatenate([part.first_s for part in parts]),
-        np.concatenate([part.second_s for part in parts]),
+        first_s,
+        first_s if told else np.concatenate([part.second_s for part in parts]),
         np.concatenate([part.value for part in parts]),
         np.concatenate([part.flags for part in parts]),
         np.concatenate([part.ordinal for part in parts]),
     )
+
+
+@njit(cache=True, nogil=True)
+def _placed(  # type: ignore[no-untyped-def]
+    series, stamp_s, value, step_min, phase_min, stamps_at_end, energy
+):
+    """Return start [s], mean value, and whether the stamp fits its series' intervals."""
+    n = len(series)
+    start_s = np.empty(n, np.int64)
+    mean = np.empty(n, np.float32)
+    fits = np.empty(n, np.bool_)
+    for i in range(n):
+        step, phase = np.int64(step_min[series[i]]), np.int64(phase_min[series[i]])
+        minute = stamp_s[i] // 60
+        fits[i] = (
+            minute * 60 == stamp_s[i]
+            and (minute - phase) % step == 0
+            and phase % FINEST_GRID_MIN == 0
+        )
+        start_s[i] = stamp_s[i] - 60 * step if stamps_at_end else stamp_s[i]
+        mean[i] = value[i] * (60.0 / step) if energy else value[i]
+    return start_s, mean, fits
 
 
 #: Words of the quality column; the utility's own codes go through a column guide.

@@ -11,15 +11,13 @@ from sqlalchemy import Connection, insert, update
 from tracker.store.models import IntakeFile, IntakeRefusal
 
 
-def open_entry(
-    connection: Connection, *, kind: str, name: str, fingerprint: str, options: Mapping[str, Any]
-) -> int:
+def open_entry(connection: Connection, *, kind: str, name: str, options: Mapping[str, Any]) -> int:
     """Begin a file's entry and return its key."""
     inserted = connection.execute(
         insert(IntakeFile).values(
             kind=kind,
             name=name,
-            fingerprint=fingerprint,
+            fingerprint="",
             imported_at=dt.datetime.now(dt.UTC),
             options=dict(options),
             readings=0,
@@ -37,6 +35,7 @@ def close_entry(
     connection: Connection,
     file_key: int,
     *,
+    fingerprint: str,
     taken: int,
     unchanged: int,
     corrected: int,
@@ -44,12 +43,13 @@ def close_entry(
 ) -> None:
     """Write down what became of a file.
 
-    `refusals` are mappings of line, column, code, reason, text.
+    `fingerprint` is a checksum of its content; `refusals` are mappings of line, column, code, reason, text.
     """
     connection.execute(
         update(IntakeFile)
         .where(IntakeFile.id == file_key)
         .values(
+            fingerprint=fingerprint,
             readings=taken + unchanged + corrected + len(refusals),
             taken=taken,
             unchanged=unchanged,

@@ -31,6 +31,7 @@ RANKING_COLUMNS: dict[str, ColumnElement[Any]] = {
 }
 
 TEXT_COLUMNS = frozenset({"unit_id", "site_id", "feeder"})
+HOUR_COLUMNS = frozenset({"hours_over_rating", "hours_over_hot_spot_limit"})
 HOTTEST_FIRST = (("peak_hot_spot_c", "desc"),)
 
 
@@ -127,7 +128,7 @@ def ranking_page(
         if direction not in ("asc", "desc"):
             raise InputError(f"sort direction {direction!r} is not known; allowed: asc, desc.")
         query = query.order_by(
-            column.is_(None), column.desc() if direction == "desc" else column.asc()
+            _is_unknown(name), column.desc() if direction == "desc" else column.asc()
         )
     query = query.order_by(Unit.unit_id).offset(start)
     if stop is not None:
@@ -201,6 +202,13 @@ def _column(name: str) -> ColumnElement[Any]:
             f"column {name!r} is not in the ranking; choose from {', '.join(RANKING_COLUMNS)}."
         )
     return RANKING_COLUMNS[name]
+
+
+def _is_unknown(name: str) -> ColumnElement[bool]:
+    """Say whether a unit has no figure in a column; hours of nothing counted are none."""
+    if name in HOUR_COLUMNS:
+        return RANKING_COLUMNS["peak_hot_spot_c"].is_(None)
+    return _column(name).is_(None)
 
 
 def _condition(each: Filter) -> ColumnElement[bool]:
