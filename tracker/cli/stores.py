@@ -2,14 +2,17 @@
 
 from __future__ import annotations
 
-from typing import Any
+from pathlib import Path
+from typing import Annotated, Any
 
 import typer
 
 from tracker.cli.common import DEFAULT_STORE, JsonOption, StoreOption, answer, opened, print_table
 
 app = typer.Typer(
-    help="Look after the store: upgrade, info, check.", no_args_is_help=True, rich_markup_mode=None
+    help="Look after the store: info, check, backup, upgrade.",
+    no_args_is_help=True,
+    rich_markup_mode=None,
 )
 
 
@@ -43,6 +46,25 @@ def info(store: StoreOption = None, json_: JsonOption = False) -> None:
         facts = store_info(database)
     rows = [{"what": name.replace("_", " "), "value": value} for name, value in facts.items()]
     answer(facts, as_json=json_, plain=lambda out: print_table(out, ("what", "value"), rows))
+
+
+@app.command()
+def backup(
+    file: Annotated[Path, typer.Argument(metavar="FILE", help="New file to write.")],
+    store: StoreOption = None,
+    json_: JsonOption = False,
+) -> None:
+    """Copy the store to a new file, whoever else is using it."""
+    from tracker.store.care import back_up
+
+    with opened(store) as database:
+        back_up(database, file)
+    size_mb = round(file.stat().st_size / 1e6, 1)
+    answer(
+        {"file": file, "size_mb": size_mb},
+        as_json=json_,
+        plain=lambda out: out.print(f"{file}: {size_mb:,} MB", markup=False),
+    )
 
 
 @app.command()

@@ -78,7 +78,7 @@ def priority_list(database: Database) -> pd.DataFrame:
         unit_id = row["unit_id"]
         row["rank"] = rank
         row["suggested_kva"] = suggested.get(unit_id)
-        row["reasons"] = _reasons(row, limit_c, too_large=suggested.get(unit_id, 0.0) is None)
+        row["reasons"] = _reasons(row, limit_c, unfit=unit_id in suggested)
     return pd.DataFrame(rows, columns=list(PRIORITY_COLUMNS))
 
 
@@ -103,7 +103,7 @@ def _urgency(row: Mapping[str, Any]) -> int:
     return _OVER_RATING if row["hours_over_rating"] > 0 else _WITHIN
 
 
-def _reasons(row: Mapping[str, Any], limit_c: float, *, too_large: bool) -> str:
+def _reasons(row: Mapping[str, Any], limit_c: float, *, unfit: bool) -> str:
     """Say in plain words why a unit stands where it stands."""
     if row["peak_hot_spot_c"] is None:
         return "no load or no air temperature is known: cannot be judged"
@@ -121,6 +121,8 @@ def _reasons(row: Mapping[str, Any], limit_c: float, *, too_large: bool) -> str:
         reasons.append(
             f"over rating for {row['hours_over_rating']:,.4g} h, up to {row['peak_load_pct']:.0f} %"
         )
-    if too_large:
+    if unfit and row["suggested_kva"] is None:
         reasons.append("no preferred rating is enough: divide the load")
+    elif unfit and row["suggested_kva"] <= row["rated_kva"]:
+        reasons.append(f"a new unit of {row['suggested_kva']:g} kVA and 65 °C rise would do")
     return "; ".join(reasons) or "within limits"

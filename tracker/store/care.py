@@ -3,13 +3,15 @@
 from __future__ import annotations
 
 import datetime as dt
+import sqlite3
 from collections.abc import Iterator
+from contextlib import closing
 from pathlib import Path
 from typing import Any
 
 from sqlalchemy import Connection, func, select, text
 
-from tracker.errors import StoreError
+from tracker.errors import InputError, StoreError
 from tracker.store.blocks import month_start_s, step_of, unpack, values_a_month
 from tracker.store.engine import Database
 from tracker.store.models import (
@@ -75,6 +77,30 @@ def _month_name(month: int | None) -> str | None:
     if month is None:
         return None
     return f"{dt.datetime.fromtimestamp(month_start_s(month), dt.UTC):%Y-%m}"
+
+
+def back_up(database: Database, path: Path) -> None:
+    """Copy a SQLite store to a new file, also while others read or write it.
+
+    Raises
+    ------
+    InputError
+        If the file exists, cannot be written, or the store is no SQLite file.
+    """
+    if database.engine.dialect.name != "sqlite":
+        raise InputError(
+            f"store {database.shown_url} is no SQLite file. Back it up with its database's own tool."
+        )
+    if path.exists():
+        raise InputError(f"{path} exists already. Name a new file.")
+    try:
+        with closing(sqlite3.connect(path)) as copy, database.reading() as connection:
+            held: Any = connection.connection.driver_connection
+            held.backup(copy)
+    except sqlite3.Error as error:
+        raise InputError(
+            f"{path} cannot be written ({error}). Name a file in a folder of your own."
+        ) from error
 
 
 def damaged_blocks(connection: Connection) -> Iterator[str]:
