@@ -7,14 +7,21 @@ from dataclasses import dataclass, fields
 import numpy as np
 from numpy.typing import NDArray
 
+from tracker.errors import ModelRangeError
+
 FloatArray = NDArray[np.float64]
 
 
 @dataclass(frozen=True, slots=True)
 class ThermalParameters:
-    """One entry a unit, float64, all of shape (n_unit,).
+    """One entry a unit, float64, all of shape (n_unit,); a scalar holds for every unit.
 
     Names follow IEEE C57.91 clause 7; rises and gradients are at rated load.
+
+    Raises
+    ------
+    ModelRangeError
+        If an entry is not above 0, or the arrays differ in length.
     """
 
     rated_kva: FloatArray  #: nameplate rating [kVA]
@@ -26,6 +33,25 @@ class ThermalParameters:
     top_oil_time_constant_h: FloatArray  #: tau at rated load [h]
     winding_time_constant_h: FloatArray  #: tau_w [h]
     reference_hot_spot_c: FloatArray  #: hot spot of normal aging, 110 or 95 [°C]
+
+    def __post_init__(self) -> None:
+        given = {f.name: np.atleast_1d(getattr(self, f.name)) for f in fields(self)}
+        n_unit = max(len(values) for values in given.values())
+        for name, values in given.items():
+            if values.shape not in ((1,), (n_unit,)):
+                raise ModelRangeError(
+                    f"{name} = array of shape {values.shape} is not one entry a unit; "
+                    f"allowed ({n_unit},) as the longest of the characteristics. "
+                    "Give each characteristic once a unit."
+                )
+            column = np.ascontiguousarray(np.broadcast_to(values, n_unit), dtype=np.float64)
+            bad = np.flatnonzero(~((column > 0.0) & np.isfinite(column)))
+            if bad.size:
+                raise ModelRangeError(
+                    f"{name} = {column[bad[0]]:g} of unit number {bad[0]} (counted from 0) is no "
+                    "characteristic of a transformer; allowed above 0. Correct the unit's data."
+                )
+            object.__setattr__(self, name, column)
 
     @property
     def n_unit(self) -> int:
