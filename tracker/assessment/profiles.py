@@ -189,8 +189,12 @@ def fleet_plan(
             stays.setdefault(stay.who, []).append(stay)
     stations = fleet.stations(connection)
     only = next(iter(stations.values())) if len(stations) == 1 else None
+    # A file without station ids holds the weather of all, whatever name the register gives it.
+    nameless = stations.get("")
     station_of_site = {
-        site["id"]: stations.get(site["weather_station"]) if site["weather_station"] else only
+        site["id"]: stations.get(site["weather_station"], nameless)
+        if site["weather_station"]
+        else only
         for site in fleet.sites(connection)
     }
     return FleetPlan(period, units, stays, station_of_site, list(stations.values()))
@@ -213,7 +217,9 @@ def profiles(
     weather = _Weather(connection, plan, fingerprint)
     for units in held_readings.in_parts(plan.units, UNITS_A_BATCH):
         for unit in units:
-            fingerprint.add_text(repr((sorted(unit.items()), plan.stays.get(unit["id"]))))
+            own = plan.stays.get(unit["id"], ())
+            stations = [plan.station_of_site[stay.site_key] for stay in own]
+            fingerprint.add_text(repr((sorted(unit.items()), own, stations)))
         yield from _batch(connection, plan, units, weather, fingerprint)
 
 

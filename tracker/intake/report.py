@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import asdict, dataclass, field
 from typing import Any
 
 #: Refusals printed in a JSON answer; the ledger and `--refusals FILE.csv` hold all of them.
@@ -78,17 +78,5 @@ def as_json(reports: Iterable[FileReport]) -> dict[str, Any]:
         "unchanged": sum(report.fates.unchanged for report in reports),
         "corrected": sum(report.fates.corrected for report in reports),
         "refused": len(refusals),
-        "refusals": [
-            {
-                "file": refusal.file,
-                "line": refusal.line,
-                "column": refusal.column,
-                "code": refusal.code,
-                "reason": refusal.reason,
-                "text": refusal.text,
-            }
-            for refusal in refusals[:SHOWN_REFUSALS]
-        ],
-        "left_out": sorted({heading for report in reports for heading in report.left_out}),
-        "notes": [note for report in reports for note in report.notes],
+        "refusals": [asdict(refusal) for refusal in refusals[:SHOWN_REFUSALS]],
     }
