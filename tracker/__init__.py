@@ -8,12 +8,12 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
+from tracker.version import __version__
+
 if TYPE_CHECKING:
     from tracker.api import TransformerStore
 
 __all__ = ["__version__", "open_store"]
-
-__version__ = "0.1.0"
 
 
 def open_store(url: str = "sqlite:///tracker.db") -> TransformerStore:

@@ -14,7 +14,7 @@ from numpy.testing import assert_allclose, assert_array_equal
 
 from tracker.errors import ModelRangeError
 from tracker.thermal import FleetFigures, ThermalState, _polynomials, simulate, summarise
-from tracker.thermal.kernel import LANES, assess_fleet
+from tracker.thermal.kernel import LANES, assess_fleet, trace_fleet
 
 LIMIT_C = 120.0
 STEPS_H = [1 / 12, 1 / 6, 0.25, 1 / 3, 0.5, 1.0]
@@ -105,6 +105,36 @@ def test_equals_the_readable_form_over_weeks(
     assert_array_equal(kernel.peak_hot_spot_index, readable.peak_hot_spot_index)
     assert_array_equal(kernel.hours_over_hot_spot_limit, readable.hours_over_hot_spot_limit)
     assert kernel.hours_over_hot_spot_limit.sum() > 0
+
+
+@settings(max_examples=20, deadline=None)
+@given(
+    st.integers(1, LANES + 1),
+    st.integers(1, 300),
+    st.sampled_from(STEPS_H),
+    st.integers(0, 2**32 - 1),
+    st.sampled_from(["corrected", "rated"]),
+)
+def test_trace_equals_the_readable_form(
+    make_fleet: Callable, n_unit: int, n_time: int, step_h: float, seed: int, time_constant: str
+) -> None:
+    """What a person sees of one unit is what the reference says, gaps and warm-up included."""
+    fleet = make_fleet(n_unit, n_time, step_h, seed)
+    kernel = trace_fleet(
+        fleet.load_kva,
+        fleet.air_temp_c,
+        fleet.station_index,
+        fleet.parameters,
+        step_h,
+        time_constant=time_constant,
+    )
+    readable = simulate(
+        fleet.load_kva, fleet.air_at_unit_c, fleet.parameters, step_h, time_constant=time_constant
+    )
+    assert_array_equal(kernel.counted, readable.counted)
+    assert_allclose(kernel.top_oil_c, readable.top_oil_c, rtol=0, atol=1e-3)
+    assert_allclose(kernel.hot_spot_c, readable.hot_spot_c, rtol=0, atol=1e-3)
+    assert_allclose(kernel.aging_factor, readable.aging_factor, rtol=1e-4, atol=1e-12)
 
 
 @pytest.mark.parametrize("load_pu", [0.0, 1e-6, 0.5, 1.0, 3.0, 10.0])

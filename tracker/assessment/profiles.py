@@ -31,6 +31,7 @@ from tracker.store.blocks import (
     values_a_month,
 )
 from tracker.store.fleet import Span, Stay
+from tracker.store.keys import in_parts
 from tracker.thermal.parameters import ThermalParameters
 
 #: Units whose profiles are held in memory at a time.
@@ -45,6 +46,11 @@ class Period:
 
     start_s: int
     end_s: int
+
+    @classmethod
+    def between(cls, starts_at: dt.datetime, ends_at: dt.datetime) -> Period:
+        """Return the period between two moments."""
+        return cls(int(starts_at.timestamp()), int(ends_at.timestamp()))
 
     @property
     def months(self) -> tuple[int, int]:
@@ -178,14 +184,12 @@ def fleet_plan(
     connection: Connection, period: Period, unit_ids: Collection[str] | None = None
 ) -> FleetPlan:
     """Look up who stood where in a period; of some units, when they are named."""
-    units = [
-        unit for unit in fleet.units(connection) if unit_ids is None or unit["unit_id"] in unit_ids
-    ]
-    wanted = {unit["id"] for unit in units}
+    units = fleet.units(connection, unit_ids)
+    keys = None if unit_ids is None else [unit["id"] for unit in units]
     whole = Span(period.starts_at, period.ends_at)
     stays: dict[int, list[Stay]] = {}
-    for stay in fleet.placements(connection):
-        if stay.who in wanted and stay.span.overlaps(whole):
+    for stay in fleet.placements(connection, keys):
+        if stay.span.overlaps(whole):
             stays.setdefault(stay.who, []).append(stay)
     stations = fleet.stations(connection)
     only = next(iter(stations.values())) if len(stations) == 1 else None
@@ -215,7 +219,7 @@ def profiles(
     """
     fingerprint = fingerprint or Fingerprint()
     weather = _Weather(connection, plan, fingerprint)
-    for units in held_readings.in_parts(plan.units, UNITS_A_BATCH):
+    for units in in_parts(plan.units, UNITS_A_BATCH):
         for unit in units:
             own = plan.stays.get(unit["id"], ())
             stations = [plan.station_of_site[stay.site_key] for stay in own]

@@ -9,7 +9,6 @@ from typing import Any
 
 import numpy as np
 
-import tracker
 from tracker.assessment.profiles import (
     Fingerprint,
     Period,
@@ -23,6 +22,7 @@ from tracker.store import results
 from tracker.store.engine import Database
 from tracker.thermal import FleetFigures, equivalent_aging_factor, loss_of_life_pct
 from tracker.thermal.kernel import assess_fleet
+from tracker.version import __version__
 
 
 @dataclass(frozen=True, slots=True)
@@ -99,7 +99,7 @@ def assess(
         key = results.add_assessment(
             connection,
             made_at=dt.datetime.now(dt.UTC),
-            program_version=tracker.__version__,
+            program_version=__version__,
             settings=asdict(settings),
             starts_at=period.starts_at,
             ends_at=period.ends_at,

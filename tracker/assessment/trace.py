@@ -1,4 +1,4 @@
-"""One unit, interval by interval: computed when somebody looks, by the readable form."""
+"""One unit, interval by interval: computed when somebody looks, never stored."""
 
 from __future__ import annotations
 
@@ -7,14 +7,15 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from sqlalchemy import Connection
 
-from tracker.assessment.profiles import chosen_period, fleet_plan, profiles
+from tracker.assessment.profiles import Period, chosen_period, fleet_plan, profiles
 from tracker.errors import InputError
 from tracker.settings import AssessmentSettings
 from tracker.store.engine import Database
 from tracker.store.fleet import unit_record
-from tracker.store.results import latest_assessment
-from tracker.thermal import simulate
+from tracker.store.results import AssessmentRow, latest_assessment
+from tracker.thermal.kernel import trace_fleet
 
 
 @dataclass(frozen=True, slots=True)
@@ -41,11 +42,14 @@ def unit_trace(
 ) -> UnitTrace:
     """Compute a unit's temperatures.
 
-    The run begins where the newest assessment began, or with the first data, so that it gives the
-    figures of the ranking; `starts_at` and `ends_at` cut out the part to show.
+    The run covers the period of the newest assessment, or all data when there is none, so that it
+    gives the figures of the ranking.
 
     Parameters
     ----------
+    starts_at, ends_at : datetime, optional
+        The part of the run to show; a part outside the assessment's period makes it a run over all
+        data on that side.
     settings : AssessmentSettings, optional
         Those of the newest assessment unless said.
 
@@ -57,27 +61,30 @@ def unit_trace(
     with database.reading() as connection:
         record = unit_record(connection, unit_id)
         latest = latest_assessment(connection)
-        run_from = latest.starts_at if latest else None
-        if run_from and starts_at and starts_at < run_from:
-            run_from = None
         if settings is None:
             settings = AssessmentSettings(**latest.settings) if latest else AssessmentSettings()
-        period = chosen_period(connection, run_from, ends_at)
+        period = _run_period(connection, latest, starts_at, ends_at)
         plan = fleet_plan(connection, period, {record.unit_id})
         (batch,) = profiles(connection, plan)
-    air = batch.air_temp_c[batch.station_index].astype(np.float64)
-    trace = simulate(
+    trace = trace_fleet(
         batch.load_kva,
-        air,
+        batch.air_temp_c,
+        batch.station_index,
         batch.parameters,
         batch.step_min / 60,
         time_constant=settings.time_constant,
     )
+    air = batch.air_temp_c[batch.station_index].astype(np.float64)
     start_s = batch.start_s + 60 * batch.step_min * np.arange(air.shape[1], dtype=np.int64)
-    shown = start_s >= (int(starts_at.timestamp()) if starts_at else 0)
+    shown = np.ones(len(start_s), dtype=np.bool_)
+    if starts_at is not None:
+        shown &= start_s >= starts_at.timestamp()
+    if ends_at is not None:
+        shown &= start_s < ends_at.timestamp()
     if not shown.any():
         raise InputError(
-            f"unit {unit_id}: no load is held from {starts_at} on; the data end at {period.ends_at}."
+            f"no load is held in the period asked for; the store holds {period.starts_at:%Y-%m-%d %H:%M} "
+            f"to {period.ends_at:%Y-%m-%d %H:%M} UTC."
         )
     return UnitTrace(
         start_s[shown],
@@ -89,3 +96,21 @@ def unit_trace(
         trace.aging_factor[0, shown],
         trace.counted[0, shown],
     )
+
+
+def _run_period(
+    connection: Connection,
+    latest: AssessmentRow | None,
+    starts_at: dt.datetime | None,
+    ends_at: dt.datetime | None,
+) -> Period:
+    """Return the assessment's period, or all data on a side where more is asked for."""
+    if latest is None:
+        return chosen_period(connection, None, None)
+    early = starts_at is not None and starts_at < latest.starts_at
+    late = ends_at is not None and ends_at > latest.ends_at
+    if early or late:
+        return chosen_period(
+            connection, None if early else latest.starts_at, None if late else latest.ends_at
+        )
+    return Period.between(latest.starts_at, latest.ends_at)

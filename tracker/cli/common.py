@@ -104,11 +104,11 @@ def moment(text: str | None, option: str) -> dt.datetime | None:
         return None
     try:
         value = dt.datetime.fromisoformat(text)
-    except ValueError as error:
+        return value.astimezone(dt.UTC) if value.tzinfo else value.replace(tzinfo=dt.UTC)
+    except (ValueError, OverflowError) as error:
         raise InputError(
             f"{option} = {text!r} is no ISO date or time, such as 2025-07-01 or 2025-07-01T05:00Z."
         ) from error
-    return value.astimezone(dt.UTC) if value.tzinfo else value.replace(tzinfo=dt.UTC)
 
 
 def shown(value: Any) -> str:

@@ -154,6 +154,8 @@ def _take(
     from tracker.intake.report import as_json
 
     checked = intake_options(**options)
+    if refusals is not None:
+        _check_place(refusals)
     reports = _reports(kind, files, store, checked, dry_run)
     if refusals is not None:
         _write_refusals(refusals, reports)
@@ -199,6 +201,12 @@ def _print(out: Console, reports: list[FileReport], *, dry_run: bool) -> None:
             out.print(f"  … and {more:,} more; --refusals FILE.csv writes them all", markup=False)
     if dry_run:
         out.print("Nothing was changed: this was a dry run.")
+
+
+def _check_place(path: Path) -> None:
+    """Notice before anything is taken in that the refusals could not be written."""
+    if path.is_dir() or not path.parent.is_dir():
+        raise InputError(f"{path} cannot be written. Name a file in a folder that is there.")
 
 
 def _write_refusals(path: Path, reports: list[FileReport]) -> None:

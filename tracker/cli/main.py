@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
+import io
 import sys
 from pathlib import Path
 from typing import Annotated, Any
 
 import typer
 
-import tracker
 from tracker.cli import imports, stores
 from tracker.cli.common import (
     FromOption,
@@ -23,6 +23,7 @@ from tracker.cli.common import (
     say,
 )
 from tracker.errors import InputError, TrackerError
+from tracker.version import __version__
 
 app = typer.Typer(
     name="tracker",
@@ -59,6 +60,9 @@ RANK_COLUMNS = (
 
 def run() -> None:
     """Run a command line and exit: 0 done, 1 a check does not hold, 2 bad usage or input."""
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="replace")  # a terminal of few letters gets question marks
     try:
         status = app(standalone_mode=False)
     except TrackerError as error:
@@ -86,14 +90,16 @@ def _root(
     version: Annotated[bool, typer.Option("--version", help="Print the version and exit.")] = False,
 ) -> None:
     if version:
-        sys.stdout.write(f"tracker {tracker.__version__}\n")
+        sys.stdout.write(f"tracker {__version__}\n")
         raise typer.Exit
 
 
 @app.command()
 def demo(
-    units: Annotated[int, typer.Option(help="Places with a transformer.")] = 240,
-    days: Annotated[int, typer.Option(help="Days of readings.")] = 365,
+    units: Annotated[
+        int, typer.Option(min=1, max=100_000, help="Places with a transformer.")
+    ] = 240,
+    days: Annotated[int, typer.Option(min=2, max=1_100, help="Days of readings.")] = 365,
     folder: Annotated[Path, typer.Option(help="Where the files and their store go.")] = Path(
         "larkmoor"
     ),
@@ -208,7 +214,9 @@ def trace(
     answer(
         {"file": file, "unit_id": unit, "intervals": len(table)},
         as_json=json_,
-        plain=lambda out: out.print(f"{file}: {len(table):,} intervals of unit {unit}"),
+        plain=lambda out: out.print(
+            f"{file}: {len(table):,} intervals of unit {unit}", markup=False
+        ),
     )
 
 
@@ -229,7 +237,9 @@ def export(
     answer(
         {"file": file, "units": len(table)},
         as_json=json_,
-        plain=lambda out: out.print(f"{file}: {len(table):,} units, most urgent first"),
+        plain=lambda out: out.print(
+            f"{file}: {len(table):,} units, most urgent first", markup=False
+        ),
     )
 
 
@@ -270,11 +280,32 @@ def verify(json_: JsonOption = False) -> int:
     rows = [check.as_row() for check in checks()]
     wrong = [row for row in rows if not row["holds"]]
 
-    def plain(out: Any) -> None:
-        print_table(
-            out, ("what", "value", "ours", "difference", "allowed", "held", "source", "holds"), rows
-        )
-        out.print(f"\n{len(rows) - len(wrong)} of {len(rows)} values hold.")
-
-    answer(rows, as_json=json_, plain=plain)
+    answer(rows, as_json=json_, plain=lambda out: _print_checks(out, rows))
     return NOT_HELD if wrong else DONE
+
+
+def _print_checks(out: Any, rows: list[dict[str, Any]]) -> None:
+    """Print check values under their sources; those that are off once more at the end."""
+
+    def line(text: str, style: str | None = None) -> None:
+        out.print(text, style=style, markup=False, soft_wrap=True)
+
+    source = None
+    for row in rows:
+        if row["source"] != source:
+            source = row["source"]
+            line(f"\n{source} ({row['held']})", style="bold")
+            line(f"{'value':>10}{'ours':>14}{'difference':>12}{'allowed':>10}")
+        line(_check_line(row))
+    wrong = [row for row in rows if not row["holds"]]
+    line(f"\n{len(rows) - len(wrong)} of {len(rows)} values hold.")
+    for row in wrong:
+        line(f"{_check_line(row)} ({row['source']})")
+
+
+def _check_line(row: dict[str, Any]) -> str:
+    difference = f"{row['difference']:+.1e}" if row["difference"] else "0"
+    return (
+        f"{row['value']:>10}{row['ours']:>14.7g}{difference:>12}{row['allowed']:>10.0e}"
+        f"  {row['what']}{'' if row['holds'] else ': OFF'}"
+    )

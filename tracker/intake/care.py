@@ -8,6 +8,7 @@ from tracker.intake.site_load import site_load_payloads
 from tracker.store import care, fleet
 from tracker.store import readings as held_readings
 from tracker.store.engine import Database
+from tracker.store.keys import in_parts
 
 
 def check_store(database: Database) -> list[str]:
@@ -24,9 +25,12 @@ def _stale_loads(connection: Connection) -> list[str]:
     problems: list[str] = []
     sites = fleet.sites(connection)
     site_ids = {site["id"]: site["site_id"] for site in sites}
-    months = held_readings.reading_months(connection)
-    for part in held_readings.in_parts([site["id"] for site in sites], 500):
-        for month in months:
+    months = set(held_readings.reading_months(connection))
+    derived = held_readings.site_load_months(connection)
+    if derived:
+        months.update(range(derived[0], derived[1] + 1))
+    for part in in_parts([site["id"] for site in sites], 500):
+        for month in sorted(months):
             blocks = held_readings.site_load_blocks(connection, part, (month, month))
             held = {site: payload for site, _, payload in blocks}
             made = site_load_payloads(connection, month, part)

@@ -28,6 +28,7 @@ from tracker.store.blocks import (
     unpack,
     values_a_month,
 )
+from tracker.store.keys import in_parts
 
 #: Blocks merged side by side; bounds the memory whatever the file.
 BLOCKS_A_BATCH = 2_048
@@ -93,7 +94,7 @@ def merge(
     order, groups = _grouped(readings, facts)
     touched: set[tuple[int, int]] = set()
     for month, members in _by_month(groups):
-        for part in held_readings.in_parts(members, BLOCKS_A_BATCH):
+        for part in in_parts(members, BLOCKS_A_BATCH):
             touched |= _merge_month(
                 connection, readings, order, part, month, quantity, file_key, fate
             )

@@ -21,7 +21,8 @@ from tracker.intake.merge import regridded
 from tracker.settings import DEFAULT_POWER_FACTOR
 from tracker.store import readings as held_readings
 from tracker.store.blocks import Quality, month_start_s, pack, step_of, values_a_month
-from tracker.store.readings import SiteMember, in_parts
+from tracker.store.keys import in_parts
+from tracker.store.readings import SiteMember
 
 #: Share of a site's energy that must be measured before the rest is scaled from it.
 LEAST_MEASURED_SHARE = 0.6

@@ -66,11 +66,14 @@ def take_units(connection: Connection, source: Source, zone: ZoneInfo | None) ->
     frame = rows.frame
     frame["site_id"] = frame["site_id"].where(frame["site_id"].notna(), frame["unit_id"])
     frame, findings = _checked_nameplates(frame)
+    frame, contradictions = _without_contradictions(frame)
+    findings += contradictions
+    given = {column.heading for column in COLUMNS if source.has(column.heading)}
     plan = _Plan(connection, zone)
     plan.decide(frame)
     frame = frame.drop(index=[finding.ordinal for finding in plan.findings])
-    corrected_sites = _put_sites(connection, frame)
-    corrected_units = _put_units(connection, frame)
+    corrected_sites = _put_sites(connection, frame, given)
+    corrected_units = _put_units(connection, frame, given)
     plan.write(connection)
     return FileReport(
         source.name,
@@ -95,11 +98,11 @@ class _Plan:
     def decide(self, frame: pd.DataFrame) -> None:
         """Give each row a fate, or a finding.
 
-        Rows of removed units come first, so that a site is free for the unit that follows, whatever
-        the order of the file.
+        Rows are taken in the order in which the stays end, so that a site is free for the unit that
+        follows, whatever the order of the file.
         """
         columns = ["unit_id", "site_id", "installed_on", "removed_on"]
-        by_end = frame.loc[frame["removed_on"].isna().sort_values(kind="stable").index, columns]
+        by_end = frame[columns].sort_values("removed_on", kind="stable", na_position="last")
         for ordinal, unit_id, site_id, installed, removed in by_end.itertuples():
             span, wrong = span_of(installed, removed, self._zone)
             stay = Stay(NEW, self._units.of(unit_id), self._sites.of(site_id), span)
@@ -191,14 +194,32 @@ def _checked_nameplates(frame: pd.DataFrame) -> tuple[pd.DataFrame, list[Finding
     return frame.drop(index=[finding.ordinal for finding in findings]), findings
 
 
+def _without_contradictions(frame: pd.DataFrame) -> tuple[pd.DataFrame, list[Finding]]:
+    """Refuse rows that say other of a unit than an earlier row does; a blank says nothing."""
+    columns = list(fleet.UNIT_COLUMNS)
+    first = frame.groupby("unit_id", sort=False)[columns].transform("first")
+    other = frame[columns].notna() & (frame[columns] != first)
+    findings: list[Finding] = []
+    for ordinal, row in other[other.any(axis=1)].iterrows():
+        column = str(row.idxmax())
+        value, earlier = str(frame.loc[ordinal, column]), str(first.loc[ordinal, column])
+        reason = (
+            f"{column} = {value} contradicts an earlier row of unit "
+            f"{str(frame.loc[ordinal, 'unit_id'])!r}, which says {earlier}"
+        )
+        findings.append(Finding(int(str(ordinal)), column, f"{column}.two_values", reason))
+    return frame.drop(index=[finding.ordinal for finding in findings]), findings
+
+
 def _nameplate(row: Mapping[str, Any] | pd.Series) -> Nameplate:
     return Nameplate(**{name: row[name] for name in fleet.NAMEPLATE_COLUMNS})
 
 
-def _put_sites(connection: Connection, frame: pd.DataFrame) -> set[str]:
+def _put_sites(connection: Connection, frame: pd.DataFrame, given: set[str]) -> set[str]:
     """Write the sites of the file; return those that changed.
 
-    Where several rows are of one site, the last that says something counts.
+    Where several rows are of one site, the last that says something counts. What the file has no
+    column for, a site that is held keeps.
     """
     columns = list(fleet.SITE_COLUMNS)
     named = frame.groupby("site_id", sort=False)[columns].last()
@@ -211,31 +232,31 @@ def _put_sites(connection: Connection, frame: pd.DataFrame) -> set[str]:
         site_id = values.pop("site_id")
         if site_id not in held:
             new.append({"site_id": site_id, **values})
-        elif any(held[site_id][name] != value for name, value in values.items()):
-            fleet.change_row(connection, Site, held[site_id]["id"], values)
+            continue
+        said = {name: value for name, value in values.items() if name in given}
+        if any(held[site_id][name] != value for name, value in said.items()):
+            fleet.change_row(connection, Site, held[site_id]["id"], said)
             corrected.add(site_id)
     fleet.add_rows(connection, Site, new)
     return corrected
 
 
-def _put_units(connection: Connection, frame: pd.DataFrame) -> set[str]:
+def _put_units(connection: Connection, frame: pd.DataFrame, given: set[str]) -> set[str]:
     """Write the nameplates of the file; return the ids of changed units."""
-    columns = list(fleet.UNIT_COLUMNS)
-    last = frame.drop_duplicates("unit_id", keep="last")
+    named = frame.groupby("unit_id", sort=False)[list(fleet.UNIT_COLUMNS)].first()
+    wanted = named.astype(object).where(named.notna(), None)
     held = {row["unit_id"]: row for row in fleet.units(connection)}
     corrected: set[str] = set()
     new: list[dict[str, Any]] = []
-    for values in last[["unit_id", *columns]].to_dict("records"):
-        unit_id = str(values["unit_id"])
+    for row in wanted.reset_index().to_dict("records"):
+        values = {str(name): value for name, value in row.items()}
+        unit_id = values["unit_id"]
         if unit_id not in held:
-            new.append({str(name): value for name, value in values.items()})
-        elif any(held[unit_id][str(name)] != value for name, value in values.items()):
-            fleet.change_row(
-                connection,
-                Unit,
-                held[unit_id]["id"],
-                {str(name): value for name, value in values.items()},
-            )
+            new.append(values)
+            continue
+        said = {name: value for name, value in values.items() if name in given}
+        if any(held[unit_id][name] != value for name, value in said.items()):
+            fleet.change_row(connection, Unit, held[unit_id]["id"], said)
             corrected.add(unit_id)
     fleet.add_rows(connection, Unit, new)
     return corrected

@@ -13,7 +13,7 @@ from tracker.planning.right_size import Candidate, suggested_ratings
 from tracker.settings import LEAST_COVERAGE_PCT, AssessmentSettings
 from tracker.store import fleet
 from tracker.store.engine import Database
-from tracker.store.results import AssessmentRow, latest_assessment, ranking_page
+from tracker.store.results import latest_assessment, ranking_page
 
 #: Columns of the list that others rely on, in this order; others may follow.
 PRIORITY_COLUMNS = (
@@ -33,6 +33,20 @@ PRIORITY_COLUMNS = (
     "coverage_pct",
     "suggested_kva",
     "reasons",
+)
+
+#: Those of them that are numbers, NaN where nothing is known.
+FIGURES = (
+    "rated_kva",
+    "peak_load_pct",
+    "peak_hot_spot_c",
+    "peak_top_oil_c",
+    "hours_over_rating",
+    "hours_over_hot_spot_limit",
+    "aging_factor",
+    "life_used_pct",
+    "coverage_pct",
+    "suggested_kva",
 )
 
 _OVER_LIMIT, _AGING_FAST, _OVER_RATING, _WITHIN, _THIN_DATA, _NO_DATA = range(6)
@@ -69,7 +83,10 @@ def priority_list(database: Database) -> pd.DataFrame:
             for unit_id in unfit
         ]
         suggested = suggested_ratings(
-            connection, candidates, _period(assessment), AssessmentSettings(**assessment.settings)
+            connection,
+            candidates,
+            Period.between(assessment.starts_at, assessment.ends_at),
+            AssessmentSettings(**assessment.settings),
         )
     rows.sort(
         key=lambda row: (urgency[row["unit_id"]], -(row["aging_factor"] or 0.0), row["unit_id"])
@@ -79,11 +96,8 @@ def priority_list(database: Database) -> pd.DataFrame:
         row["rank"] = rank
         row["suggested_kva"] = suggested.get(unit_id)
         row["reasons"] = _reasons(row, limit_c, unfit=unit_id in suggested)
-    return pd.DataFrame(rows, columns=list(PRIORITY_COLUMNS))
-
-
-def _period(assessment: AssessmentRow) -> Period:
-    return Period(int(assessment.starts_at.timestamp()), int(assessment.ends_at.timestamp()))
+    table = pd.DataFrame(rows, columns=list(PRIORITY_COLUMNS))
+    return table.astype(dict.fromkeys(FIGURES, float))  # also where all are unknown
 
 
 def _is_unfit(row: Mapping[str, Any], limit_c: float) -> bool:
@@ -112,17 +126,21 @@ def _reasons(row: Mapping[str, Any], limit_c: float, *, unfit: bool) -> str:
         reasons.append(f"ranked apart: data cover only {row['coverage_pct']:.0f} % of the period")
     if row["hours_over_hot_spot_limit"] > 0:
         reasons.append(
-            f"hot spot over {limit_c:g} °C for {row['hours_over_hot_spot_limit']:,.4g} h, "
+            f"hot spot over {limit_c:g} °C for {_hours(row['hours_over_hot_spot_limit'])} h, "
             f"up to {row['peak_hot_spot_c']:.0f} °C"
         )
     if row["aging_factor"] > 1.0:
         reasons.append(f"insulation aging {row['aging_factor']:.3g} times as fast as normal")
     if row["hours_over_rating"] > 0:
         reasons.append(
-            f"over rating for {row['hours_over_rating']:,.4g} h, up to {row['peak_load_pct']:.0f} %"
+            f"over rating for {_hours(row['hours_over_rating'])} h, up to {row['peak_load_pct']:.0f} %"
         )
     if unfit and row["suggested_kva"] is None:
         reasons.append("no preferred rating is enough: divide the load")
     elif unfit and row["suggested_kva"] <= row["rated_kva"]:
         reasons.append(f"a new unit of {row['suggested_kva']:g} kVA and 65 °C rise would do")
     return "; ".join(reasons) or "within limits"
+
+
+def _hours(hours: float) -> str:
+    return f"{hours:,.0f}" if hours >= 1000 else f"{hours:.4g}"

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import datetime as dt
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass, fields
 from typing import Any
 
@@ -11,6 +11,7 @@ from sqlalchemy import Connection, delete, insert, select, update
 
 from tracker.errors import InputError
 from tracker.fleet.nameplate import Nameplate
+from tracker.store.keys import in_parts
 from tracker.store.models import MeterConnection, Placement, Series, Site, Unit
 
 NAMEPLATE_COLUMNS = tuple(field.name for field in fields(Nameplate))
@@ -106,10 +107,21 @@ def unit_record(connection: Connection, unit_id: str) -> UnitRecord:
 # --- Reading the whole fleet ----------------------------------------------------------------------
 
 
-def units(connection: Connection) -> list[dict[str, Any]]:
-    """Return all units by unit id: id, unit_id and the register's columns."""
-    query = select(Unit.__table__).order_by(Unit.unit_id)
-    return [dict(row._mapping) for row in connection.execute(query)]
+def units(connection: Connection, unit_ids: Collection[str] | None = None) -> list[dict[str, Any]]:
+    """Return units by unit id, all or those named: id, unit_id and the register's columns."""
+    query = select(Unit.__table__)
+    rows = _all_or_named(connection, query, Unit.unit_id, unit_ids)
+    return sorted((dict(row._mapping) for row in rows), key=lambda unit: unit["unit_id"])
+
+
+def _all_or_named(
+    connection: Connection, query: Any, column: Any, names: Collection[Any] | None
+) -> list[Any]:
+    """Return all rows, or those whose column is one of the names."""
+    if names is None:
+        return list(connection.execute(query))
+    parts = in_parts(sorted(names))
+    return [row for part in parts for row in connection.execute(query.where(column.in_(part)))]
 
 
 def sites(connection: Connection) -> list[dict[str, Any]]:
@@ -118,12 +130,13 @@ def sites(connection: Connection) -> list[dict[str, Any]]:
     return [dict(row._mapping) for row in connection.execute(query)]
 
 
-def placements(connection: Connection) -> list[Stay]:
-    """Return every unit's stays at sites, by unit and start."""
+def placements(connection: Connection, unit_keys: Collection[int] | None = None) -> list[Stay]:
+    """Return the stays of units at sites, of all or those named, by unit and start."""
     query = select(
         Placement.id, Placement.unit_key, Placement.site_key, Placement.starts_at, Placement.ends_at
     ).order_by(Placement.unit_key, Placement.starts_at.is_not(None), Placement.starts_at)
-    return [Stay(row[0], row[1], row[2], Span(row[3], row[4])) for row in connection.execute(query)]
+    rows = _all_or_named(connection, query, Placement.unit_key, unit_keys)
+    return [Stay(row[0], row[1], row[2], Span(row[3], row[4])) for row in rows]
 
 
 def connections(connection: Connection) -> list[Stay]:

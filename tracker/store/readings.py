@@ -5,7 +5,6 @@ from __future__ import annotations
 import datetime as dt
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any
 
 from sqlalchemy import (
     Connection,
@@ -18,6 +17,7 @@ from sqlalchemy import (
     update,
 )
 
+from tracker.store.keys import in_parts
 from tracker.store.models import (
     MeterConnection,
     Placement,
@@ -27,15 +27,6 @@ from tracker.store.models import (
     SupersededBlock,
     Unit,
 )
-
-#: Keys named in one query; SQLite allows 32,766 parameters.
-KEYS_A_QUERY = 10_000
-
-
-def in_parts(keys: Sequence[Any], size: int = KEYS_A_QUERY) -> Iterator[Sequence[Any]]:
-    """Cut a list of keys into lists that one query can name."""
-    for start in range(0, len(keys), size):
-        yield keys[start : start + size]
 
 
 def series_keys(connection: Connection, kind: str, names: Sequence[str]) -> dict[str, int]:

@@ -31,7 +31,7 @@ from tracker.thermal.c57_91 import (
 from tracker.thermal.parameters import ThermalParameters
 
 if TYPE_CHECKING:
-    from tracker.thermal.kernel import assess_fleet
+    from tracker.thermal.kernel import assess_fleet, trace_fleet
 
 __all__ = [
     "NORMAL_INSULATION_LIFE_H",
@@ -50,6 +50,7 @@ __all__ = [
     "simulate",
     "steady_state",
     "summarise",
+    "trace_fleet",
     "ultimate_hot_spot_gradient",
     "ultimate_top_oil_rise",
 ]
@@ -57,8 +58,8 @@ __all__ = [
 
 def __getattr__(name: str) -> Any:
     """Bring in the fleet kernel, and with it the compiler, only when it is asked for."""
-    if name == "assess_fleet":
-        from tracker.thermal.kernel import assess_fleet  # noqa: PLC0415 - see above
+    if name in ("assess_fleet", "trace_fleet"):
+        from tracker.thermal import kernel  # noqa: PLC0415 - see above
 
-        return assess_fleet
+        return getattr(kernel, name)
     raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
