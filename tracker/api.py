@@ -113,6 +113,7 @@ class TransformerStore:
         ends_at: dt.datetime | None = None,
     ) -> AssessmentSummary:
         """Run the thermal model over the fleet and store the figures."""
+        _check_zones(starts_at=starts_at, ends_at=ends_at)
         return assess(self.database, settings, starts_at=starts_at, ends_at=ends_at)
 
     def ranking(self) -> pd.DataFrame:
@@ -127,8 +128,18 @@ class TransformerStore:
         ends_at: dt.datetime | None = None,
     ) -> pd.DataFrame:
         """Return one unit interval by interval."""
+        _check_zones(starts_at=starts_at, ends_at=ends_at)
         trace = unit_trace(self.database, unit_id, starts_at=starts_at, ends_at=ends_at)
         return trace_table(trace)
+
+
+def _check_zones(**moments: dt.datetime | None) -> None:
+    """Refuse naive times: they would mean another period on another machine."""
+    for name, moment in moments.items():
+        if moment is not None and moment.tzinfo is None:
+            raise InputError(
+                f"{name} = {moment} has no time zone. Give it one, for instance tzinfo=datetime.UTC."
+            )
 
 
 def intake_options(

@@ -200,14 +200,14 @@ def _without_contradictions(frame: pd.DataFrame) -> tuple[pd.DataFrame, list[Fin
     first = frame.groupby("unit_id", sort=False)[columns].transform("first")
     other = frame[columns].notna() & (frame[columns] != first)
     findings: list[Finding] = []
-    for ordinal, row in other[other.any(axis=1)].iterrows():
-        column = str(row.idxmax())
+    for ordinal in other.index[other.any(axis=1)].tolist():
+        column = str(other.loc[ordinal].idxmax())
         value, earlier = str(frame.loc[ordinal, column]), str(first.loc[ordinal, column])
         reason = (
             f"{column} = {value} contradicts an earlier row of unit "
             f"{str(frame.loc[ordinal, 'unit_id'])!r}, which says {earlier}"
         )
-        findings.append(Finding(int(str(ordinal)), column, f"{column}.two_values", reason))
+        findings.append(Finding(ordinal, column, f"{column}.two_values", reason))
     return frame.drop(index=[finding.ordinal for finding in findings]), findings
 
 

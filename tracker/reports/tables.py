@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 from pathlib import Path
 
 import numpy as np
@@ -51,6 +52,8 @@ def write_csv(table: pd.DataFrame, path: Path) -> None:
         unfinished.write_text(csv_text(table), encoding="utf-8", newline="")
         unfinished.replace(path)
     except OSError as error:
+        with contextlib.suppress(OSError):
+            unfinished.unlink(missing_ok=True)
         raise InputError(
             f"{path} cannot be written: {error.strerror}. Name a file in a folder of your own."
         ) from error
