@@ -11,10 +11,8 @@ import pandas as pd
 from tracker.assessment.run import AssessmentSummary, assess
 from tracker.assessment.trace import unit_trace
 from tracker.errors import InputError
-from tracker.intake.files import IntakeOptions, Kind, take_file
-from tracker.intake.readings import ReadingOptions
+from tracker.intake.files import Kind, intake_options, take_file
 from tracker.intake.report import FileReport
-from tracker.intake.stamps import zone_of
 from tracker.planning.priority import priority_list
 from tracker.reports.tables import trace_table
 from tracker.settings import AssessmentSettings
@@ -140,24 +138,3 @@ def _check_zones(**moments: dt.datetime | None) -> None:
             raise InputError(
                 f"{name} = {moment} has no time zone. Give it one, for instance tzinfo=datetime.UTC."
             )
-
-
-def intake_options(
-    *,
-    timezone: str | None = None,
-    stamps: str = "start",
-    interval: int | None = None,
-    power_factor: float | None = None,
-    quantity: str | None = None,
-) -> IntakeOptions:
-    """Check options as people give them.
-
-    Raises
-    ------
-    InputError
-        If one is out of range.
-    """
-    if stamps not in ("start", "end"):
-        raise InputError(f"stamps = {stamps!r} is not known; allowed: start, end.")
-    reading = ReadingOptions(zone_of(timezone), stamps == "end", interval, power_factor)
-    return IntakeOptions(reading, quantity)

@@ -412,3 +412,25 @@ def test_frames_are_taken_like_files(utility, fates) -> None:
     assert (report.refusals[0].line, report.refusals[0].column) == (3, "rated_kva")
     assert held(utility)["customers"] == 3
     assert held(utility)["installed_on"] == dt.datetime(2020, 1, 1, tzinfo=dt.UTC)
+
+
+def test_a_register_without_places_leaves_units_where_they_stand(utility, fates) -> None:
+    """A new test sheet of rated figures must not move a unit, nor make up a site for it."""
+    full = "unit_id,rated_kva,site_id,installed_on\nT-1,25,S-1,2020-01-01\n"
+    utility.take("units", utility.file(full))
+    report = utility.take("units", utility.file("unit_id,rated_kva\nT-1,37.5\nT-2,10\n", "b.csv"))
+    assert fates(report) == (1, 0, 1, 0)
+    assert held(utility)["rated_kva"] == 37.5
+    assert held(utility)["site_id"] == "S-1"
+    assert held(utility)["installed_on"] == dt.datetime(2020, 1, 1, tzinfo=dt.UTC)
+    assert utility.count(Site) == 2
+
+
+def test_a_register_without_dates_leaves_the_dates(utility, fates) -> None:
+    """Where the file has no column for it, nothing is said of it."""
+    utility.take(
+        "units", utility.file("unit_id,rated_kva,site_id,installed_on\nT-1,25,S-1,2020-01-01\n")
+    )
+    again = utility.file("unit_id,rated_kva,site_id\nT-1,25,S-1\n", "b.csv")
+    assert fates(utility.take("units", again)) == (0, 1, 0, 0)
+    assert held(utility)["installed_on"] == dt.datetime(2020, 1, 1, tzinfo=dt.UTC)

@@ -148,3 +148,24 @@ def test_the_list_needs_an_assessment(utility) -> None:
     """And says which command makes one."""
     with pytest.raises(InputError, match="Run `tracker assess` first"):
         priority_list(utility.database)
+
+
+def test_a_unit_that_was_removed_is_no_candidate(utility) -> None:
+    """It stands nowhere any more: nobody can replace it, however hot it ran."""
+    utility.take(
+        "units",
+        utility.file(
+            "unit_id,rated_kva,site_id,installed_on,removed_on\n"
+            "OLD,10,S,,2025-07-05\nNEW,25,S,2025-07-05,\n"
+        ),
+    )
+    stamps = pd.date_range("2025-07-01", "2025-07-10", freq="h", tz="UTC", inclusive="left")
+    owner = np.where(stamps < pd.Timestamp("2025-07-05", tz="UTC"), "OLD", "NEW")
+    utility.take("loads", pd.DataFrame({"unit_id": owner, "read_at": stamps, "kva": 22.0}))
+    utility.take("weather", pd.DataFrame({"read_at": stamps, "air_temp_c": 30.0}))
+    assess(utility.database)
+    listed = priority_list(utility.database).set_index("unit_id")
+    assert list(listed.index) == ["NEW", "OLD"]
+    assert listed.loc["OLD", "reasons"] == "removed on 2025-07-05"
+    assert np.isnan(listed.loc["OLD", "suggested_kva"])
+    assert listed.loc["OLD", "peak_load_pct"] == pytest.approx(220.0)

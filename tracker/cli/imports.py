@@ -150,7 +150,7 @@ def _take(
     json_: bool,
     **options: Any,
 ) -> int:
-    from tracker.api import intake_options
+    from tracker.intake.files import intake_options
     from tracker.intake.report import as_json
 
     checked = intake_options(**options)

@@ -186,9 +186,7 @@ def thermal_parameters(nameplates: Iterable[Nameplate]) -> ThermalParameters:
 
 def _thermal_row(nameplate: Nameplate) -> Sequence[float]:
     figures = completed(nameplate)
-    number = {
-        name: float(figure.value) for name, figure in figures.items() if name != "cooling"
-    }
+    number = {name: float(figure.value) for name, figure in figures.items() if name != "cooling"}
     return (
         nameplate.rated_kva,
         number["top_oil_rise_c"],

@@ -10,11 +10,13 @@ from typing import TYPE_CHECKING, Any, Literal
 
 from sqlalchemy import Connection
 
+from tracker.errors import InputError
 from tracker.intake.connections import take_connections
 from tracker.intake.loads import take_loads
 from tracker.intake.readings import ReadingOptions
 from tracker.intake.report import FileReport
 from tracker.intake.source import Source, open_source
+from tracker.intake.stamps import zone_of
 from tracker.intake.units import take_units
 from tracker.intake.weather import take_weather
 from tracker.store import ledger
@@ -77,6 +79,27 @@ def take_file(
             refusals=refusals,
         )
     return report
+
+
+def intake_options(
+    *,
+    timezone: str | None = None,
+    stamps: str = "start",
+    interval: int | None = None,
+    power_factor: float | None = None,
+    quantity: str | None = None,
+) -> IntakeOptions:
+    """Check options as people give them.
+
+    Raises
+    ------
+    InputError
+        If one is out of range.
+    """
+    if stamps not in ("start", "end"):
+        raise InputError(f"stamps = {stamps!r} is not known; allowed: start, end.")
+    reading = ReadingOptions(zone_of(timezone), stamps == "end", interval, power_factor)
+    return IntakeOptions(reading, quantity)
 
 
 def _noted(options: IntakeOptions) -> dict[str, Any]:

@@ -12,6 +12,7 @@ import gzip
 import io
 import itertools
 from abc import ABC, abstractmethod
+from collections import deque
 from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, BinaryIO, cast
@@ -185,11 +186,16 @@ class CsvSource(Source):
                         f"{self.name}: is empty. A CSV file begins with one line of headings."
                     )
                 try:
-                    text = line.decode("utf-8-sig").strip("\r\n")
+                    text = line.decode("utf-8-sig").rstrip("\r\n")
                 except UnicodeDecodeError as error:
                     raise IntakeError(
                         f"{self.name}: line {number + 1} is not UTF-8 text. Save the file as UTF-8 CSV."
                     ) from error
+                if "\r" in text:
+                    raise IntakeError(
+                        f"{self.name}: its lines end in a lone carriage return. "
+                        "Save the file with the line ends of Windows (CR LF) or Unix (LF)."
+                    )
                 if text.strip():
                     return number, text
         raise AssertionError  # unreachable: count() has no end
@@ -203,6 +209,8 @@ class CsvSource(Source):
             f"read_csv('{path}', auto_detect=false, header=true, skip={self._blank_lines}, "
             f"delim='{self._separator}', quote='\"', escape='\"', encoding='utf-8', "
             f"compression='{'gzip' if self._gzipped else 'none'}', "
+            # Blank lines before the headings may end otherwise than the rest.
+            f"strict_mode={'false' if self._blank_lines else 'true'}, "
             f"columns={{{columns}}}, store_rejects=true)"
         )
 
@@ -215,64 +223,57 @@ class CsvSource(Source):
             wanted.setdefault(finding.ordinal, []).append(finding)
         refusals: list[Refusal] = []
         ordinal = -1
-        left = len(wanted) + len(broken)
-        for record, line, text in self._records():
-            if record in broken:
-                column, code, reason = broken[record]
-                refusals.append(Refusal(self.name, line, column, code, reason, text))
+        for end_byte, line, text in self._records():
+            if broken and broken[0][0] < end_byte:
+                refusals.append(Refusal(self.name, line, *broken.popleft()[1:], text))
             else:
                 ordinal += 1
-                if ordinal not in wanted:
-                    continue
                 refusals.extend(
                     Refusal(self.name, line, finding.column, finding.code, finding.reason, text)
-                    for finding in wanted[ordinal]
+                    for finding in wanted.pop(ordinal, ())
                 )
-            left -= 1
-            if not left:
+            if not wanted and not broken:
                 break
         return refusals
 
-    def _broken_records(self) -> dict[int, tuple[str, str, str]]:
-        """Return the records DuckDB could not split: {record number: (column, code, reason)}."""
+    def _broken_records(self) -> deque[tuple[int, str, str, str]]:
+        """Return the records DuckDB could not split, in order: (byte, column, code, reason).
+
+        The byte lies in the record, or in blank lines before it. A record may be named several
+        times; its first complaint is kept.
+        """
         rows = self._database.execute(
-            "SELECT line, column_name, error_type, error_message FROM reject_errors ORDER BY line"
+            "SELECT line_byte_position, column_name, error_type, error_message FROM reject_errors "
+            "ORDER BY line_byte_position, byte_position"
         ).fetchall()
         self._database.execute("DELETE FROM reject_errors")
-        broken: dict[int, tuple[str, str, str]] = {}
-        for record, column, kind, message in rows:
+        broken: dict[int, tuple[int, str, str, str]] = {}
+        for byte, column, kind, message in rows:
             heading = self.headings[int(column[1:])] if column else ""
-            # DuckDB counts records after the lines it was told to skip.
-            broken.setdefault(
-                int(record) + self._blank_lines, (heading, *_plain_words(kind, message))
-            )
-        return broken
+            broken.setdefault(int(byte), (int(byte), heading, *_plain_words(kind, message)))
+        return deque(broken.values())
 
     def _records(self) -> Iterator[tuple[int, int, str]]:
-        """Yield (record number, line number, text) of each record after the headings.
+        """Yield (byte after it, line number, text) of each record after the headings.
 
-        A record is a line, or several when a quoted field holds line breaks; blank ones are counted,
-        as DuckDB does, but not yielded.
+        A record is a line, or several when a quoted field holds line breaks; blank ones are passed
+        over, as DuckDB does.
         """
         with self._open() as file:
-            for _ in range(self._blank_lines + 1):
-                file.readline()
-            record = self._blank_lines + 1
-            held, held_line = "", 0
-            text_file = io.TextIOWrapper(file, encoding="utf-8", errors="replace", newline=None)
-            for number, line in enumerate(text_file, start=self._blank_lines + 2):
-                if not held:
-                    held_line = number
-                held += line
-                if held.count('"') % 2:
-                    continue  # a quoted field is still open
-                record += 1
-                text = held.rstrip("\n")
-                held = ""
-                if text:
-                    yield record, held_line, text[:KEPT_TEXT]
-            if held:
-                yield record + 1, held_line, held[:KEPT_TEXT]
+            byte = sum(len(file.readline()) for _ in range(self._blank_lines + 1))
+            first_line, held, is_open = 0, "", False
+            for number, raw in enumerate(file, start=self._blank_lines + 2):
+                line = raw.decode("utf-8", errors="replace").rstrip("\r\n")
+                if not is_open:
+                    first_line, held = number, line
+                elif len(held) < KEPT_TEXT:
+                    held += "\n" + line
+                byte += len(raw)
+                is_open = _quote_is_open(line, self._separator, is_open)
+                if held and not is_open:
+                    yield byte, first_line, held[:KEPT_TEXT]
+            if is_open:
+                yield byte, first_line, held[:KEPT_TEXT]
 
     def fingerprint(self) -> str:
         digest = xxhash.xxh3_128()
@@ -280,6 +281,33 @@ class CsvSource(Source):
             while part := file.read(1 << 20):
                 digest.update(part)
         return digest.hexdigest()
+
+
+def _quote_is_open(line: str, separator: str, is_open: bool) -> bool:
+    """Say whether a quoted field is open at the end of a line; `is_open` says it of the beginning.
+
+    A quote opens a field only at its very beginning; anywhere else it is a sign like any.
+    """
+    if '"' not in line:
+        return is_open
+    at = 0
+    while True:
+        if is_open:
+            at = line.find('"', at)
+            if at < 0:
+                return True
+            if line.startswith('""', at):
+                at += 2
+                continue
+            is_open = False
+        elif line.startswith('"', at):
+            is_open = True
+            at += 1
+            continue
+        at = line.find(separator, at)
+        if at < 0:
+            return False
+        at += 1
 
 
 def _plain_words(kind: str, message: str) -> tuple[str, str]:
@@ -317,7 +345,10 @@ class FrameSource(Source):
         self._database.register("given", renamed)
 
     def _table(self) -> str:
-        columns = ", ".join(f"k{i}::VARCHAR AS c{i}" for i in range(len(self.headings)))
+        columns = ", ".join(
+            f"k{i}{'::DATE' if _are_dates(self._frame.iloc[:, i]) else ''}::VARCHAR AS c{i}"
+            for i in range(len(self.headings))
+        )
         return f"(SELECT {columns} FROM given)"  # noqa: S608 - our own names, no input
 
     def refusals(self, findings: Sequence[Finding]) -> list[Refusal]:
@@ -338,6 +369,16 @@ class FrameSource(Source):
 
         hashes = pd.util.hash_pandas_object(self._frame, index=False).to_numpy()
         return xxhash.xxh3_128(hashes.tobytes()).hexdigest()
+
+
+def _are_dates(column: pd.Series) -> bool:
+    """Say whether times without a zone are midnights all: dates, which pandas has no type for."""
+    import pandas as pd  # noqa: PLC0415 - heavy
+
+    if not pd.api.types.is_datetime64_dtype(column.dtype):
+        return False
+    known = column.dropna()
+    return bool((known == known.dt.normalize()).all())
 
 
 def _row_text(values: Sequence[Any]) -> str:

@@ -64,13 +64,14 @@ def take_units(connection: Connection, source: Source, zone: ZoneInfo | None) ->
     """
     rows = read_register(source, COLUMNS)
     frame = rows.frame
-    frame["site_id"] = frame["site_id"].where(frame["site_id"].notna(), frame["unit_id"])
     frame, findings = _checked_nameplates(frame)
     frame, contradictions = _without_contradictions(frame)
     findings += contradictions
     given = {column.heading for column in COLUMNS if source.has(column.heading)}
     plan = _Plan(connection, zone)
-    plan.decide(frame)
+    home = frame["unit_id"] if "site_id" in given else frame["unit_id"].map(plan.home)
+    frame["site_id"] = frame["site_id"].where(frame["site_id"].notna(), home)
+    plan.decide(frame, given)
     frame = frame.drop(index=[finding.ordinal for finding in plan.findings])
     corrected_sites = _put_sites(connection, frame, given)
     corrected_units = _put_units(connection, frame, given)
@@ -95,17 +96,29 @@ class _Plan:
         self.findings: list[Finding] = []
         self.fate: dict[int, str] = {}
 
-    def decide(self, frame: pd.DataFrame) -> None:
+    def home(self, unit_id: str) -> str:
+        """Return the site a unit stood at last; its own id when it stood nowhere yet."""
+        stays = self._book.held.get(self._units.of(unit_id))
+        return self._sites.name(stays[-1].site_key) if stays else unit_id
+
+    def decide(self, frame: pd.DataFrame, given: set[str]) -> None:
         """Give each row a fate, or a finding.
 
         Rows are taken in the order in which the stays end, so that a site is free for the unit that
-        follows, whatever the order of the file.
+        follows, whatever the order of the file. A file without the columns that say where or when a
+        unit stands leaves what is held of it.
         """
         columns = ["unit_id", "site_id", "installed_on", "removed_on"]
         by_end = frame[columns].sort_values("removed_on", kind="stable", na_position="last")
         for ordinal, unit_id, site_id, installed, removed in by_end.itertuples():
+            unit = self._units.of(unit_id)
+            site = self._sites.of(site_id)
+            stood_there = any(held.site_key == site for held in self._book.held.get(unit, ()))
+            if stood_there and not given & {"installed_on", "removed_on"}:
+                self.fate[ordinal] = "unchanged"
+                continue
             span, wrong = span_of(installed, removed, self._zone)
-            stay = Stay(NEW, self._units.of(unit_id), self._sites.of(site_id), span)
+            stay = Stay(NEW, unit, site, span)
             code, reason = "removed_on.too_early", f"unit {unit_id} {wrong}"
             if wrong is None:
                 code, reason = self._obstacle(unit_id, site_id, stay)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import datetime as dt
 from collections.abc import Mapping
 from typing import Any
 
@@ -49,7 +50,7 @@ FIGURES = (
     "suggested_kva",
 )
 
-_OVER_LIMIT, _AGING_FAST, _OVER_RATING, _WITHIN, _THIN_DATA, _NO_DATA = range(6)
+_OVER_LIMIT, _AGING_FAST, _OVER_RATING, _WITHIN, _THIN_DATA, _NO_DATA, _REMOVED = range(7)
 
 
 def priority_list(database: Database) -> pd.DataFrame:
@@ -57,7 +58,8 @@ def priority_list(database: Database) -> pd.DataFrame:
 
     First come units over the hot-spot limit, then units aging faster than normal, then units over
     their rating, then the rest; within each, the fastest aging first, and ties by unit id. Units
-    whose data cover too little of the period are ranked after all others.
+    whose data cover too little of the period are ranked after all others, and those that were
+    removed last.
 
     Returns
     -------
@@ -75,8 +77,15 @@ def priority_list(database: Database) -> pd.DataFrame:
             raise InputError("no assessment is held yet. Run `tracker assess` first.")
         rows = ranking_page(connection, assessment.key).rows
         limit_c = float(assessment.settings["hot_spot_limit_c"])
-        urgency = {row["unit_id"]: _urgency(row) for row in rows}
-        unfit = [row["unit_id"] for row in rows if _is_unfit(row, limit_c)]
+        removed = fleet.removed_units(connection)
+        urgency = {
+            row["unit_id"]: _REMOVED if row["unit_id"] in removed else _urgency(row) for row in rows
+        }
+        unfit = [
+            row["unit_id"]
+            for row in rows
+            if row["unit_id"] not in removed and _is_unfit(row, limit_c)
+        ]
         nameplates = {unit["unit_id"]: unit for unit in fleet.units(connection)}
         candidates = [
             Candidate(unit_id, nameplates[unit_id]["phases"] or 1, nameplates[unit_id]["cooling"])
@@ -95,7 +104,7 @@ def priority_list(database: Database) -> pd.DataFrame:
         unit_id = row["unit_id"]
         row["rank"] = rank
         row["suggested_kva"] = suggested.get(unit_id)
-        row["reasons"] = _reasons(row, limit_c, unfit=unit_id in suggested)
+        row["reasons"] = _reasons(row, limit_c, removed.get(unit_id), unfit=unit_id in suggested)
     table = pd.DataFrame(rows, columns=list(PRIORITY_COLUMNS))
     return table.astype(dict.fromkeys(FIGURES, float))  # also where all are unknown
 
@@ -117,8 +126,12 @@ def _urgency(row: Mapping[str, Any]) -> int:
     return _OVER_RATING if row["hours_over_rating"] > 0 else _WITHIN
 
 
-def _reasons(row: Mapping[str, Any], limit_c: float, *, unfit: bool) -> str:
+def _reasons(
+    row: Mapping[str, Any], limit_c: float, removed_at: dt.datetime | None, *, unfit: bool
+) -> str:
     """Say in plain words why a unit stands where it stands."""
+    if removed_at is not None:
+        return f"removed on {removed_at:%Y-%m-%d}"
     if row["peak_hot_spot_c"] is None:
         return "no load or no air temperature is known: cannot be judged"
     reasons = []

@@ -139,6 +139,17 @@ def placements(connection: Connection, unit_keys: Collection[int] | None = None)
     return [Stay(row[0], row[1], row[2], Span(row[3], row[4])) for row in rows]
 
 
+def removed_units(connection: Connection) -> dict[str, dt.datetime]:
+    """Return when each unit that stands nowhere any more was removed: {unit id: moment}."""
+    query = (
+        select(Unit.unit_id, Placement.ends_at)
+        .join_from(Placement, Unit, Placement.unit_key == Unit.id)
+        .order_by(Placement.starts_at.is_not(None), Placement.starts_at)
+    )
+    last = {row[0]: row[1] for row in connection.execute(query)}
+    return {unit_id: ends_at for unit_id, ends_at in last.items() if ends_at is not None}
+
+
 def connections(connection: Connection) -> list[Stay]:
     """Return every meter's stays at sites, by meter and start."""
     query = select(
