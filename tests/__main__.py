@@ -1,6 +1,6 @@
-"""`python -m tests`: every check of the project, one after the other, whatever fails.
+"""`python tests`: every check of the project, one after the other, whatever fails.
 
-Words after the command go to pytest: `python -m tests -k intake`.
+Words after the command go to pytest: `python tests -k intake`.
 """
 
 from __future__ import annotations
