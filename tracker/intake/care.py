@@ -30,10 +30,11 @@ def _stale_loads(connection: Connection) -> list[str]:
     if derived:
         months.update(range(derived[0], derived[1] + 1))
     for part in in_parts([site["id"] for site in sites], 500):
+        members = held_readings.site_members(connection, part)
         for month in sorted(months):
             blocks = held_readings.site_load_blocks(connection, part, (month, month))
             held = {site: payload for site, _, payload in blocks}
-            made = site_load_payloads(connection, month, part)
+            made = site_load_payloads(connection, month, part, members)
             problems += [
                 f"site {site_ids[site]}: its load is not what its readings give; import any file of "
                 "its meters anew, or report this"

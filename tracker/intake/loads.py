@@ -48,7 +48,7 @@ INTERVAL_HEADING = re.compile(r"h\d{1,3}|\d{1,2}:\d{2}(:\d{2})?", re.IGNORECASE)
 DAY_COLUMNS = {24: 60, 48: 30, 72: 20, 96: 15, 144: 10, 288: 5}
 
 #: Batches decoded ahead while readings are merged; about one chunk of readings.
-BATCHES_AHEAD = 6
+BATCHES_AHEAD = 16
 
 LAYOUTS = (
     "meter_id (or unit_id), read_at and kwh, kw or kva; "

@@ -19,7 +19,7 @@ from tracker.store import readings as held_readings
 from tracker.store.blocks import Quality, step_of
 
 #: Readings merged at a time: bounds the memory whatever the file.
-READINGS_A_CHUNK = 6_000_000
+READINGS_A_CHUNK = 4_000_000
 
 #: The smallest grid that readings may begin on [min].
 FINEST_GRID_MIN = 5

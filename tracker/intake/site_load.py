@@ -55,28 +55,31 @@ def derive(connection: Connection, touched: Iterable[tuple[int, int]]) -> int:
 
 def derive_sites(connection: Connection, site_months: Iterable[tuple[int, int]]) -> int:
     """Derive the load of sites anew: {(site key, month)}; return how many."""
-    by_month: dict[int, list[int]] = {}
+    months_of_site: dict[int, list[int]] = {}
     for site, month in sorted(set(site_months)):
-        by_month.setdefault(month, []).append(site)
-    for month, sites in by_month.items():
-        for part in in_parts(sites, SITES_A_BATCH):
-            _derive_month(connection, month, part)
-    return sum(len(sites) for sites in by_month.values())
-
-
-def _derive_month(connection: Connection, month: int, sites: Sequence[int]) -> None:
-    payloads = site_load_payloads(connection, month, sites)
-    held_readings.replace_site_load(connection, month, payloads)
+        months_of_site.setdefault(site, []).append(month)
+    for part in in_parts(list(months_of_site), SITES_A_BATCH):
+        members = held_readings.site_members(connection, part)
+        sites_of_month: dict[int, list[int]] = {}
+        for site in part:
+            for month in months_of_site[site]:
+                sites_of_month.setdefault(month, []).append(site)
+        for month, sites in sites_of_month.items():
+            payloads = site_load_payloads(connection, month, sites, members)
+            held_readings.replace_site_load(connection, month, payloads)
+    return sum(len(months) for months in months_of_site.values())
 
 
 def site_load_payloads(
-    connection: Connection, month: int, sites: Sequence[int]
+    connection: Connection, month: int, sites: Sequence[int], members: Sequence[SiteMember]
 ) -> dict[int, bytes | None]:
-    """Return the packed load of sites for one month; None for those that nothing is known of."""
+    """Return the packed load of sites for one month; None for those that nothing is known of.
+
+    `members` are all that hang on the sites, in order; those of other sites are passed over.
+    """
+    wanted = set(sites)
     members = [
-        member
-        for member in held_readings.site_members(connection, sites)
-        if _overlaps(member, month)
+        member for member in members if member.site_key in wanted and _overlaps(member, month)
     ]
     series = sorted({member.series_key for member in members})
     active = held_readings.held_blocks(connection, "kw", month, series)

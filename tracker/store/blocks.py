@@ -18,6 +18,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from enum import IntFlag
+from functools import cache
 
 import numpy as np
 import xxhash
@@ -59,6 +60,7 @@ def month_of(seconds: int) -> int:
     return int(np.datetime64(seconds, "s").astype("datetime64[M]").astype(np.int64))
 
 
+@cache
 def month_start_s(month: int) -> int:
     """Return the first moment of a month [s since 1970, UTC].
 
@@ -68,6 +70,7 @@ def month_start_s(month: int) -> int:
     return int(np.datetime64(month, "M").astype("datetime64[s]").astype(np.int64))
 
 
+@cache
 def values_a_month(month: int, step_min: int) -> int:
     """Return how many values a block of this month and step holds.
 
