@@ -239,7 +239,6 @@ def upgrade() -> None:
         sa.Column("life_used_pct", sa.Double(), nullable=True),
         sa.Column("counted_hours", sa.Double(), nullable=False),
         sa.Column("coverage_pct", sa.Double(), nullable=False),
-        sa.Column("end_at", sa.DateTime(), nullable=True),
         sa.Column("end_top_oil_rise_k", sa.Double(), nullable=True),
         sa.Column("end_hot_spot_gradient_k", sa.Double(), nullable=True),
         sa.Column("end_last_load_pu", sa.Double(), nullable=True),

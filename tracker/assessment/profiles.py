@@ -8,8 +8,9 @@ from __future__ import annotations
 
 import datetime as dt
 import math
-from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Collection, Iterator, Mapping, Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -22,20 +23,21 @@ from tracker.fleet.nameplate import Nameplate, thermal_parameters
 from tracker.store import fleet
 from tracker.store import readings as held_readings
 from tracker.store.blocks import (
-    HEADER_BYTES,
+    Blocks,
     Float32Array,
     month_of,
     month_start_s,
-    step_of,
     unpack,
-    values_a_month,
 )
 from tracker.store.fleet import Span, Stay
 from tracker.store.keys import in_parts
 from tracker.thermal.parameters import ThermalParameters
 
 #: Units whose profiles are held in memory at a time.
-UNITS_A_BATCH = 2_048
+UNITS_A_BATCH = 512
+
+#: Sites looked at together to learn which part of a month is known.
+SITES_LOOKED_AT = 256
 
 WEATHER = "air_temp_c"
 
@@ -105,9 +107,9 @@ class Fingerprint:
     def __init__(self) -> None:
         self._digest = xxhash.xxh3_128()
 
-    def add_blocks(self, payloads: Iterable[bytes]) -> None:
-        """Take blocks in."""
-        self._digest.update(b"".join(payload[:HEADER_BYTES] for payload in payloads))
+    def add_blocks(self, blocks: Blocks) -> None:
+        """Take blocks in, by the checksums in their headers."""
+        self._digest.update(blocks.headers)
 
     def add_text(self, text: str) -> None:
         """Take a nameplate or a placement in."""
@@ -133,20 +135,31 @@ def data_period(connection: Connection) -> Period:
         raise InputError(
             "the store holds no load of any site. Import units, connections and loads first."
         )
-    first_s = min(_known_seconds(connection, months[0]))
-    last_s = max(_known_seconds(connection, months[1]))
+    first_s = min(start_s for start_s, _ in _known_spans(connection, months[0]))
+    last_s = max(end_s for _, end_s in _known_spans(connection, months[1]))
     return Period(first_s // 3600 * 3600, -(-last_s // 3600) * 3600)
 
 
-def _known_seconds(connection: Connection, month: int) -> Iterator[int]:
-    """Yield start and end of what is known of each site in a month."""
-    rows = held_readings.site_load_blocks(connection, None, (month, month))
-    for same in _of_equal_length(rows):
-        payloads = [payload for _, _, payload in same]
-        step_s = 60 * step_of(payloads[0])
-        known = np.flatnonzero(unpack(payloads)[1].any(axis=0))
-        yield month_start_s(month) + int(known[0]) * step_s
-        yield month_start_s(month) + int(known[-1] + 1) * step_s
+def _known_spans(connection: Connection, month: int) -> Iterator[tuple[int, int]]:
+    """Yield from when to when some site's load is known in a month [s since 1970, UTC].
+
+    Stops once the whole month is: a few sites tell, of however many.
+    """
+    month_s, next_s = month_start_s(month), month_start_s(month + 1)
+    covered = (next_s, month_s)
+    for part in in_parts(held_readings.sites_of_month(connection, month), SITES_LOOKED_AT):
+        blocks = held_readings.site_load_blocks(connection, part, (month, month))
+        for _, step_min, places in blocks.of_equal_length():
+            flags = unpack([blocks.payload[place] for place in places.tolist()])[1]
+            known = np.flatnonzero(flags.any(axis=0))
+            span = (
+                month_s + 60 * step_min * int(known[0]),
+                month_s + 60 * step_min * int(known[-1] + 1),
+            )
+            covered = min(covered[0], span[0]), max(covered[1], span[1])
+            yield span
+        if covered == (month_s, next_s):
+            return
 
 
 def chosen_period(
@@ -196,10 +209,8 @@ def fleet_plan(
     # A file without station ids holds the weather of all, whatever name the register gives it.
     nameless = stations.get("")
     station_of_site = {
-        site["id"]: stations.get(site["weather_station"], nameless)
-        if site["weather_station"]
-        else only
-        for site in fleet.sites(connection)
+        site: stations.get(name, nameless) if name else only
+        for site, name in fleet.stations_named(connection).items()
     }
     return FleetPlan(period, units, stays, station_of_site, list(stations.values()))
 
@@ -207,23 +218,31 @@ def fleet_plan(
 # --- The profiles ---------------------------------------------------------------------------------
 
 
-def profiles(
-    connection: Connection, plan: FleetPlan, fingerprint: Fingerprint | None = None
-) -> Iterator[Profiles]:
-    """Yield the profiles of a fleet, a batch of units of one step at a time.
+def profiles(connection: Connection, plan: FleetPlan) -> Iterator[Profiles]:
+    """Yield the profiles of a fleet, a batch of units of one step at a time."""
+    return (unpacked() for unpacked in packed_profiles(connection, plan, Fingerprint()))
+
+
+def packed_profiles(
+    connection: Connection, plan: FleetPlan, fingerprint: Fingerprint
+) -> Iterator[Callable[[], Profiles]]:
+    """Read the blocks of a fleet, a batch of units of one step at a time.
 
     Parameters
     ----------
-    fingerprint : Fingerprint, optional
+    fingerprint : Fingerprint
         Takes in all data on the way.
+
+    Yields
+    ------
+    callable
+        Unpacks the batch; may be called in another thread, while the next batch is read.
     """
-    fingerprint = fingerprint or Fingerprint()
     weather = _Weather(connection, plan, fingerprint)
     for units in in_parts(plan.units, UNITS_A_BATCH):
-        for unit in units:
-            own = plan.stays.get(unit["id"], ())
-            stations = [plan.station_of_site[stay.site_key] for stay in own]
-            fingerprint.add_text(repr((sorted(unit.items()), own, stations)))
+        stays = [plan.stays.get(unit["id"], ()) for unit in units]
+        stations = [[plan.station_of_site[stay.site_key] for stay in own] for own in stays]
+        fingerprint.add_text(repr(([tuple(unit.values()) for unit in units], stays, stations)))
         yield from _batch(connection, plan, units, weather, fingerprint)
 
 
@@ -233,13 +252,11 @@ def _batch(
     units: Sequence[Mapping[str, Any]],
     weather: _Weather,
     fingerprint: Fingerprint,
-) -> Iterator[Profiles]:
+) -> Iterator[Callable[[], Profiles]]:
     sites = sorted({stay.site_key for unit in units for stay in plan.stays.get(unit["id"], ())})
-    rows = list(held_readings.site_load_blocks(connection, sites, plan.period.months))
-    fingerprint.add_blocks(payload for _, _, payload in rows)
-    site_step: dict[int, int] = {}
-    for site, _, payload in rows:
-        site_step[site] = math.gcd(site_step.get(site, 0), step_of(payload))
+    blocks = held_readings.site_load_blocks(connection, sites, plan.period.months)
+    fingerprint.add_blocks(blocks)
+    site_step = _steps(blocks)
     by_step: dict[int, list[Mapping[str, Any]]] = {}
     for unit in units:
         stays = plan.stays.get(unit["id"], ())
@@ -247,13 +264,13 @@ def _batch(
         steps += [weather.step_of(plan.station_of_site[stay.site_key]) for stay in stays]
         by_step.setdefault(math.gcd(*steps) or 60, []).append(unit)
     for step_min, members in sorted(by_step.items()):
-        yield _profiles(plan, members, rows, weather, step_min)
+        yield partial(_profiles, plan, members, blocks, weather, step_min)
 
 
 def _profiles(
     plan: FleetPlan,
     units: Sequence[Mapping[str, Any]],
-    rows: Sequence[tuple[int, int, bytes]],
+    blocks: Blocks,
     weather: _Weather,
     step_min: int,
 ) -> Profiles:
@@ -262,13 +279,13 @@ def _profiles(
         own[0].site_key if len(own) == 1 and _covers(own[0].span, plan.period) else None
         for own in stays
     ]
-    load = np.full((len(units), _n_time(plan.period, step_min)), np.nan, dtype=np.float32)
+    load = np.empty((len(units), _n_time(plan.period, step_min)), dtype=np.float32)
     # A unit that stood at one site all the time is filled in place; others are pieced together.
     place = {site: row for row, site in enumerate(site_of_row) if site is not None}
-    _fill(load, rows, place, plan.period, step_min)
+    _fill(load, blocks, place, plan.period, step_min)
     pieced = [row for row, site in enumerate(site_of_row) if site is None and stays[row]]
     for row in pieced:
-        _piece_together(load[row], stays[row], rows, plan.period, step_min)
+        _piece_together(load[row], stays[row], blocks, plan.period, step_min)
     air, station_index = weather.of_units(plan, stays, step_min)
     return Profiles(
         [unit["id"] for unit in units],
@@ -309,49 +326,64 @@ def _hours(stays: Sequence[Stay], period: Period) -> float:
     return sum(end_s - start_s for start_s, end_s in parts) / 3600
 
 
-def _of_equal_length(
-    rows: Iterable[tuple[int, int, bytes]],
-) -> Iterator[list[tuple[int, int, bytes]]]:
-    """Group blocks that can be unpacked side by side: of one month and length."""
-    groups: dict[tuple[int, int], list[tuple[int, int, bytes]]] = {}
-    for row in rows:
-        groups.setdefault((row[1], len(row[2])), []).append(row)
-    yield from groups.values()
+def _steps(blocks: Blocks) -> dict[int, int]:
+    """Return the finest step of each key [min]: {key: step}."""
+    if not len(blocks):
+        return {}
+    keys, first = np.unique(blocks.key, return_index=True)
+    steps = np.gcd.reduceat(blocks.step_min, first)
+    return dict(zip(keys.tolist(), steps.tolist(), strict=True))
 
 
 def _fill(
     room: Float32Array,
-    rows: Iterable[tuple[int, int, bytes]],
-    place: Mapping[int, int],
+    blocks: Blocks,
+    row_of: Mapping[int, int],
     period: Period,
     step_min: int,
 ) -> None:
-    """Unpack blocks into the rows that `place` gives their keys; others are passed over."""
+    """Unpack blocks into the rows that `row_of` gives their keys, NaN where there is none."""
     step_s = 60 * step_min
-    for same in _of_equal_length(row for row in rows if row[0] in place):
-        month, payload = same[0][1], same[0][2]
-        values, _ = unpack([row[2] for row in same])
-        times = step_of(payload) // step_min
+    rows = np.array([row_of.get(key, -1) for key in blocks.key.tolist()], dtype=np.intp)
+    n_filled = np.bincount(
+        blocks.month[rows >= 0] - period.months[0],
+        minlength=period.months[1] - period.months[0] + 1,
+    )
+    for month, n_row in enumerate(n_filled.tolist(), start=period.months[0]):
+        if n_row < len(room):
+            start, stop, _ = _places(month, period, step_s, room.shape[1])
+            room[:, start:stop] = np.nan
+    for month, own_step_min, places in blocks.of_equal_length():
+        chosen = places[rows[places] >= 0]
+        if not len(chosen):
+            continue
+        values, _ = unpack([blocks.payload[place] for place in chosen.tolist()])
+        times = own_step_min // step_min
         if times > 1:
             values = np.repeat(values, times, axis=1)
-        first = (month_start_s(month) - period.start_s) // step_s
-        start, stop = max(first, 0), min(first + values_a_month(month, step_min), room.shape[1])
-        targets = [place[row[0]] for row in same]
-        room[targets, start:stop] = values[:, start - first : stop - first]
+        start, stop, first = _places(month, period, step_s, room.shape[1])
+        room[rows[chosen], start:stop] = values[:, start - first : stop - first]
+
+
+def _places(month: int, period: Period, step_s: int, n_time: int) -> tuple[int, int, int]:
+    """Return where a month's part of the period starts and stops, and where the month would start."""
+    first = (month_start_s(month) - period.start_s) // step_s
+    after = (month_start_s(month + 1) - period.start_s) // step_s
+    return max(first, 0), min(after, n_time), first
 
 
 def _piece_together(
     load: Float32Array,
     stays: Sequence[Stay],
-    rows: Sequence[tuple[int, int, bytes]],
+    blocks: Blocks,
     period: Period,
     step_min: int,
 ) -> None:
     """Put the load of each site where the unit stood there."""
     step_s = 60 * step_min
     for stay in stays:
-        whole = np.full((1, len(load)), np.nan, dtype=np.float32)
-        _fill(whole, rows, {stay.site_key: 0}, period, step_min)
+        whole = np.empty((1, len(load)), dtype=np.float32)
+        _fill(whole, blocks, {stay.site_key: 0}, period, step_min)
         start_s, end_s = _part_of(stay.span, period)
         part = slice(
             -(-(start_s - period.start_s) // step_s), -(-(end_s - period.start_s) // step_s)
@@ -363,15 +395,13 @@ class _Weather:
     """Air temperatures of all stations of a plan, at any step."""
 
     def __init__(self, connection: Connection, plan: FleetPlan, fingerprint: Fingerprint) -> None:
-        self._rows = held_readings.series_blocks(
+        self._blocks = held_readings.series_blocks(
             connection, plan.stations, WEATHER, plan.period.months
         )
-        fingerprint.add_blocks(payload for _, _, payload in self._rows)
+        fingerprint.add_blocks(self._blocks)
         self._row_of = {station: row for row, station in enumerate(plan.stations)}
         self._period = plan.period
-        self._steps: dict[int, int] = {}
-        for station, _, payload in self._rows:
-            self._steps[station] = math.gcd(self._steps.get(station, 0), step_of(payload))
+        self._steps = _steps(self._blocks)
         self._made: dict[int, Float32Array] = {}
 
     def step_of(self, station: int | None) -> int:
@@ -383,8 +413,12 @@ class _Weather:
         if step_min not in self._made:
             shape = (len(self._row_of) + 1, _n_time(self._period, step_min))
             air = np.full(shape, np.nan, dtype=np.float32)
-            usable = [row for row in self._rows if self._steps[row[0]] % step_min == 0]
-            _fill(air, usable, self._row_of, self._period, step_min)
+            usable = {
+                station: row
+                for station, row in self._row_of.items()
+                if self.step_of(station) % step_min == 0
+            }
+            _fill(air, self._blocks, usable, self._period, step_min)
             self._made[step_min] = air
         return self._made[step_min]
 

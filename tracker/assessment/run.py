@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import datetime as dt
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterable, Iterator
+from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import asdict, dataclass
 from typing import Any
 
@@ -15,8 +16,9 @@ from tracker.assessment.profiles import (
     Profiles,
     chosen_period,
     fleet_plan,
-    profiles,
+    packed_profiles,
 )
+from tracker.collector import seldom_collected
 from tracker.settings import WARM_UP_H, AssessmentSettings
 from tracker.store import results
 from tracker.store.engine import Database
@@ -63,6 +65,7 @@ class AssessmentSummary:
         )
 
 
+@seldom_collected()
 def assess(
     database: Database,
     settings: AssessmentSettings | None = None,
@@ -91,8 +94,9 @@ def assess(
         plan = fleet_plan(connection, period)
         fingerprint = Fingerprint()
         rows: list[dict[str, Any]] = []
-        for batch in profiles(connection, plan, fingerprint):
-            rows += _rows(batch, _figures(batch, settings), settings, period)
+        batches = packed_profiles(connection, plan, fingerprint)
+        for batch, figures in _assessed(batches, settings):
+            rows += _rows(batch, figures, settings)
             if on_progress:
                 on_progress(len(rows) / len(plan.units))
     with database.writing() as connection:
@@ -109,8 +113,27 @@ def assess(
     return _summary(key, period, settings, rows)
 
 
-def _figures(batch: Profiles, settings: AssessmentSettings) -> FleetFigures:
-    return assess_fleet(
+Assessed = tuple[Profiles, FleetFigures]
+
+
+def _assessed(
+    batches: Iterable[Callable[[], Profiles]], settings: AssessmentSettings
+) -> Iterator[Assessed]:
+    """Yield each batch with its figures: the next is read while the kernel runs over the last."""
+    with ThreadPoolExecutor(1) as beside:
+        waiting: Future[Assessed] | None = None
+        for unpacked in batches:
+            begun = beside.submit(_assess_batch, unpacked, settings)
+            if waiting is not None:
+                yield waiting.result()
+            waiting = begun
+        if waiting is not None:
+            yield waiting.result()
+
+
+def _assess_batch(unpacked: Callable[[], Profiles], settings: AssessmentSettings) -> Assessed:
+    batch = unpacked()
+    figures = assess_fleet(
         batch.load_kva,
         batch.air_temp_c,
         batch.station_index,
@@ -119,10 +142,11 @@ def _figures(batch: Profiles, settings: AssessmentSettings) -> FleetFigures:
         hot_spot_limit_c=settings.hot_spot_limit_c,
         time_constant=settings.time_constant,
     )
+    return batch, figures
 
 
 def _rows(
-    batch: Profiles, figures: FleetFigures, settings: AssessmentSettings, period: Period
+    batch: Profiles, figures: FleetFigures, settings: AssessmentSettings
 ) -> Iterator[dict[str, Any]]:
     """Turn figures into rows of the results table."""
     counted_h = figures.counted_hours
@@ -161,7 +185,6 @@ def _rows(
             "unit_key": unit_key,
             "site_key": site_key,
             "peak_hot_spot_at": dt.datetime.fromtimestamp(peak_at, dt.UTC) if index >= 0 else None,
-            "end_at": period.ends_at,
             **dict(zip(columns, values, strict=True)),
         }
 

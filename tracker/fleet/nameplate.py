@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Literal
 
 import numpy as np
@@ -184,6 +185,7 @@ def thermal_parameters(nameplates: Iterable[Nameplate]) -> ThermalParameters:
     return ThermalParameters(*(np.ascontiguousarray(column) for column in table.T))
 
 
+@lru_cache(maxsize=100_000)
 def _thermal_row(nameplate: Nameplate) -> Sequence[float]:
     figures = completed(nameplate)
     number = {name: float(figure.value) for name, figure in figures.items() if name != "cooling"}

@@ -33,7 +33,7 @@ def _stale_loads(connection: Connection) -> list[str]:
         members = held_readings.site_members(connection, part)
         for month in sorted(months):
             blocks = held_readings.site_load_blocks(connection, part, (month, month))
-            held = {site: payload for site, _, payload in blocks}
+            held = dict(zip(blocks.key.tolist(), blocks.payload, strict=True))
             made = site_load_payloads(connection, month, part, members)
             problems += [
                 f"site {site_ids[site]}: its load is not what its readings give; import any file of "

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any, Literal
 
 from sqlalchemy import Connection
 
+from tracker.collector import seldom_collected
 from tracker.errors import InputError
 from tracker.intake.connections import take_connections
 from tracker.intake.loads import take_loads
@@ -36,6 +37,7 @@ class IntakeOptions:
     quantity: str | None = None
 
 
+@seldom_collected()
 def take_file(
     database: Database,
     kind: Kind,

@@ -16,9 +16,11 @@ copy of memory and not a loop over values.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
 from enum import IntFlag
 from functools import cache
+from typing import Any
 
 import numpy as np
 import xxhash
@@ -141,6 +143,43 @@ def unpack(payloads: Sequence[bytes]) -> tuple[Float32Array, FlagArray]:
         raise StoreError(_DAMAGED.format("a block's checksum does not hold"))
     split = HEADER_BYTES + 4 * n_value
     return room[:, HEADER_BYTES:split].view("<f4"), room[:, split:]
+
+
+@dataclass(frozen=True, slots=True)
+class Blocks:
+    """Packed blocks as a query gives them; arrays of shape (n_block,)."""
+
+    key: NDArray[np.int64]  #: of the series or site
+    month: NDArray[np.int64]
+    payload: Sequence[bytes]
+    step_min: NDArray[np.int64]
+    headers: bytes  #: all headers, checksums included, one after the other
+
+    @classmethod
+    def of(cls, rows: Sequence[Any]) -> Blocks:
+        """Take rows of (key, month, payload)."""
+        key, month, payload = zip(*rows, strict=True) if rows else ((), (), ())
+        headers = b"".join([each[:HEADER_BYTES] for each in payload])
+        if len(headers) != HEADER_BYTES * len(payload):
+            raise StoreError(_DAMAGED.format("a block is shorter than its header"))
+        return cls(
+            np.array(key, dtype=np.int64),
+            np.array(month, dtype=np.int64),
+            payload,
+            np.frombuffer(headers, dtype=HEADER)["step_min"].astype(np.int64),
+            headers,
+        )
+
+    def __len__(self) -> int:
+        return len(self.payload)
+
+    def of_equal_length(self) -> Iterator[tuple[int, int, NDArray[np.intp]]]:
+        """Yield (month, step, places of the blocks that have both), by month and step."""
+        for month in np.unique(self.month).tolist():
+            of_month = np.flatnonzero(self.month == month)
+            steps = self.step_min[of_month]
+            for step in np.unique(steps).tolist():
+                yield month, step, of_month[steps == step]
 
 
 _DAMAGED = "the store is damaged: {}. `tracker store check` names the place; restore a backup."

@@ -5,6 +5,7 @@ from __future__ import annotations
 import datetime as dt
 from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass, fields
+from operator import itemgetter
 from typing import Any
 
 from sqlalchemy import Connection, delete, insert, select, update
@@ -111,7 +112,8 @@ def units(connection: Connection, unit_ids: Collection[str] | None = None) -> li
     """Return units by unit id, all or those named: id, unit_id and the register's columns."""
     query = select(Unit.__table__)
     rows = _all_or_named(connection, query, Unit.unit_id, unit_ids)
-    return sorted((dict(row._mapping) for row in rows), key=lambda unit: unit["unit_id"])
+    names = Unit.__table__.columns.keys()
+    return sorted((dict(zip(names, row, strict=True)) for row in rows), key=itemgetter("unit_id"))
 
 
 def _all_or_named(
@@ -166,6 +168,12 @@ def connections(connection: Connection) -> list[Stay]:
         Stay(row[0], row[1], row[2], Span(row[3], row[4]), row[5])
         for row in connection.execute(query)
     ]
+
+
+def stations_named(connection: Connection) -> dict[int, str | None]:
+    """Return the weather station that each site names: {site key: name}."""
+    rows = connection.execute(select(Site.id, Site.weather_station)).all()
+    return {row[0]: row[1] for row in rows}
 
 
 def stations(connection: Connection) -> dict[str, int]:

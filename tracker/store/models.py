@@ -239,7 +239,7 @@ class Assessment(Base):
 
 
 class UnitResult(Base):
-    """One unit's figures in an assessment, and its thermal state at the end.
+    """One unit's figures in an assessment, and its thermal state at the assessment's end.
 
     Figures are NULL where no interval counted.
     """
@@ -263,7 +263,6 @@ class UnitResult(Base):
     life_used_pct: Mapped[float | None]
     counted_hours: Mapped[float]
     coverage_pct: Mapped[float]
-    end_at: Mapped[dt.datetime | None]
     end_top_oil_rise_k: Mapped[float | None]
     end_hot_spot_gradient_k: Mapped[float | None]
     end_last_load_pu: Mapped[float | None]

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import datetime as dt
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 
 from sqlalchemy import (
@@ -17,6 +17,7 @@ from sqlalchemy import (
     update,
 )
 
+from tracker.store.blocks import Blocks
 from tracker.store.keys import in_parts
 from tracker.store.models import (
     MeterConnection,
@@ -269,40 +270,40 @@ def site_load_months(connection: Connection) -> tuple[int, int] | None:
     return None if first is None else (first, last)
 
 
+def sites_of_month(connection: Connection, month: int) -> list[int]:
+    """Return the sites whose load is held of a month."""
+    query = select(SiteLoadBlock.site_key).where(SiteLoadBlock.month == month)
+    return list(connection.scalars(query.order_by(SiteLoadBlock.site_key)))
+
+
 def site_load_blocks(
-    connection: Connection, site_keys: Sequence[int] | None, months: tuple[int, int]
-) -> Iterator[tuple[int, int, bytes]]:
-    """Yield (site key, month, payload), both ends included; of all sites when none are named."""
+    connection: Connection, site_keys: Sequence[int], months: tuple[int, int]
+) -> Blocks:
+    """Return the blocks of sites, both months included."""
     query = (
         select(SiteLoadBlock.site_key, SiteLoadBlock.month, SiteLoadBlock.payload)
         .where(SiteLoadBlock.month.between(*months))
         .order_by(SiteLoadBlock.site_key, SiteLoadBlock.month)
     )
-    if site_keys is None:
-        yield from ((row[0], row[1], row[2]) for row in connection.execute(query))
-        return
-    for part in in_parts(site_keys):
-        named = query.where(SiteLoadBlock.site_key.in_(part))
-        yield from ((row[0], row[1], row[2]) for row in connection.execute(named))
+    keys = sorted(site_keys)
+    if keys and keys[-1] - keys[0] + 1 == len(keys):  # neighbours all: no need to name each
+        named = [query.where(SiteLoadBlock.site_key.between(keys[0], keys[-1]))]
+    else:
+        named = [query.where(SiteLoadBlock.site_key.in_(part)) for part in in_parts(keys)]
+    return Blocks.of([row for each in named for row in connection.execute(each).all()])
 
 
 def series_blocks(
     connection: Connection, keys: Sequence[int], quantity: str, months: tuple[int, int]
-) -> list[tuple[int, int, bytes]]:
-    """Return (series key, month, payload) of some series, in that order."""
-    rows: list[tuple[int, int, bytes]] = []
-    for part in in_parts(keys):
-        query = (
-            select(ReadingBlock.series_key, ReadingBlock.month, ReadingBlock.payload)
-            .where(
-                ReadingBlock.series_key.in_(part),
-                ReadingBlock.quantity == quantity,
-                ReadingBlock.month.between(*months),
-            )
-            .order_by(ReadingBlock.series_key, ReadingBlock.month)
-        )
-        rows += [(row[0], row[1], row[2]) for row in connection.execute(query)]
-    return rows
+) -> Blocks:
+    """Return the blocks of one quantity of some series, both months included."""
+    query = (
+        select(ReadingBlock.series_key, ReadingBlock.month, ReadingBlock.payload)
+        .where(ReadingBlock.quantity == quantity, ReadingBlock.month.between(*months))
+        .order_by(ReadingBlock.series_key, ReadingBlock.month)
+    )
+    named = (query.where(ReadingBlock.series_key.in_(part)) for part in in_parts(sorted(keys)))
+    return Blocks.of([row for each in named for row in connection.execute(each).all()])
 
 
 def reading_months(connection: Connection) -> list[int]:
