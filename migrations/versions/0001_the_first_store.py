@@ -19,6 +19,7 @@ def upgrade() -> None:
         "assessment",
         sa.Column("id", sa.Integer(), nullable=False),
         sa.Column("made_at", sa.DateTime(), nullable=False),
+        sa.Column("finished_at", sa.DateTime(), nullable=True),
         sa.Column("program_version", sa.String(length=40), nullable=False),
         sa.Column("settings", sa.JSON(), nullable=False),
         sa.Column("starts_at", sa.DateTime(), nullable=False),

@@ -7,13 +7,15 @@ import datetime as dt
 import numpy as np
 import pandas as pd
 import pytest
-from sqlalchemy import select
+from sqlalchemy import func, select, update
 
+from tracker.assessment import profiles
 from tracker.assessment.run import assess
 from tracker.assessment.trace import unit_trace
 from tracker.errors import InputError
 from tracker.settings import AssessmentSettings
-from tracker.store.models import UnitResult
+from tracker.store import results
+from tracker.store.models import Assessment, UnitResult
 from tracker.store.results import latest_assessment, ranking_page
 
 DAY = 24
@@ -366,3 +368,36 @@ def test_an_unknown_unit_is_refused(summer) -> None:
     """With the command that lists the known ones."""
     with pytest.raises(InputError, match="unit 'NOBODY' is not in the store"):
         unit_trace(summer.database, "NOBODY")
+
+
+def test_an_interrupted_assessment_is_shown_to_nobody(week, monkeypatch) -> None:
+    """Whoever opens the ranking sees the last whole run, and what was left lying is cleared away."""
+    first = assess(week.database)
+
+    def interrupted(*_: object) -> None:
+        raise KeyboardInterrupt
+
+    with monkeypatch.context() as patch:
+        patch.setattr(results, "add_results", interrupted)
+        with pytest.raises(KeyboardInterrupt):
+            assess(week.database)
+    with week.database.reading() as connection:
+        assert latest_assessment(connection).key == first.key
+    long_ago = dt.datetime.now(dt.UTC) - 2 * results.FORGOTTEN_AFTER
+    with week.database.writing() as connection:
+        unfinished = Assessment.finished_at.is_(None)
+        connection.execute(update(Assessment).where(unfinished).values(made_at=long_ago))
+    assess(week.database)
+    with week.database.reading() as connection:
+        assert connection.scalar(select(func.count()).select_from(Assessment)) == 2
+
+
+def test_many_batches_make_one_assessment(week, monkeypatch) -> None:
+    """Batches are read, unpacked and run beside each other; none is lost and none comes twice."""
+    register = "unit_id,rated_kva\n" + "".join(f"U-{n},25\n" for n in range(11))
+    week.take("units", week.file(register, "more.csv"))
+    monkeypatch.setattr(profiles, "UNITS_A_BATCH", 2)
+    summary = assess(week.database)
+    assert summary.units == 12
+    assert summary.units_without_figures == 11
+    assert len(rows_of(week.database)) == 12

@@ -174,6 +174,7 @@ def test_files_that_came_in_later_are_counted(tmp_path: Any) -> None:
         connection.execute(
             insert(Assessment).values(
                 made_at=made_at,
+                finished_at=made_at,
                 program_version="0",
                 settings={},
                 starts_at=made_at,

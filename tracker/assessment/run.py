@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import datetime as dt
-from collections.abc import Callable, Iterable, Iterator
+from collections import deque
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -34,11 +35,27 @@ class AssessmentSummary:
     key: int
     period: Period
     settings: AssessmentSettings
-    units: int
-    units_without_figures: int
-    units_over_rating: int
-    units_over_hot_spot_limit: int
-    units_aging_faster_than_normal: int
+    units: int = 0
+    units_without_figures: int = 0
+    units_over_rating: int = 0
+    units_over_hot_spot_limit: int = 0
+    units_aging_faster_than_normal: int = 0
+
+    def with_rows(self, rows: Sequence[Mapping[str, Any]]) -> AssessmentSummary:
+        """Return the summary with the results of more units in it."""
+        aging = self.units_aging_faster_than_normal
+        return replace(
+            self,
+            units=self.units + len(rows),
+            units_without_figures=self.units_without_figures
+            + sum(row["peak_hot_spot_c"] is None for row in rows),
+            units_over_rating=self.units_over_rating
+            + sum(row["hours_over_rating"] > 0 for row in rows),
+            units_over_hot_spot_limit=self.units_over_hot_spot_limit
+            + sum(row["hours_over_hot_spot_limit"] > 0 for row in rows),
+            units_aging_faster_than_normal=aging
+            + sum((row["aging_factor"] or 0) > 1 for row in rows),
+        )
 
     def as_json(self) -> dict[str, Any]:
         """Return it for scripts."""
@@ -92,47 +109,51 @@ def assess(
     with database.reading() as connection:
         period = chosen_period(connection, starts_at, ends_at)
         plan = fleet_plan(connection, period)
+        with database.writing() as written:
+            key = results.begin_assessment(
+                written,
+                program_version=__version__,
+                settings=asdict(settings),
+                starts_at=period.starts_at,
+                ends_at=period.ends_at,
+            )
+        summary = AssessmentSummary(key, period, settings)
         fingerprint = Fingerprint()
-        rows: list[dict[str, Any]] = []
-        batches = packed_profiles(connection, plan, fingerprint)
-        for batch, figures in _assessed(batches, settings):
-            rows += _rows(batch, figures, settings)
+        for batch, figures in _assessed(packed_profiles(connection, plan, fingerprint), settings):
+            rows = list(_rows(key, batch, figures, settings))
+            with database.writing() as written:
+                results.add_results(written, rows)
+            summary = summary.with_rows(rows)
             if on_progress:
-                on_progress(len(rows) / len(plan.units))
-    with database.writing() as connection:
-        key = results.add_assessment(
-            connection,
-            made_at=dt.datetime.now(dt.UTC),
-            program_version=__version__,
-            settings=asdict(settings),
-            starts_at=period.starts_at,
-            ends_at=period.ends_at,
-            data_fingerprint=str(fingerprint),
-        )
-        results.add_results(connection, [{"assessment_key": key, **row} for row in rows])
-    return _summary(key, period, settings, rows)
+                on_progress(summary.units / len(plan.units))
+    with database.writing() as written:
+        results.finish_assessment(written, key, str(fingerprint))
+    return summary
 
 
 Assessed = tuple[Profiles, FleetFigures]
+
+#: Batches under way at a time: one read, one unpacked, one in the kernel.
+BATCHES_UNDER_WAY = 3
 
 
 def _assessed(
     batches: Iterable[Callable[[], Profiles]], settings: AssessmentSettings
 ) -> Iterator[Assessed]:
-    """Yield each batch with its figures: the next is read while the kernel runs over the last."""
-    with ThreadPoolExecutor(1) as beside:
-        waiting: Future[Assessed] | None = None
+    """Yield each batch with its figures, while the next is unpacked and the one after it read."""
+    with ThreadPoolExecutor(1) as unpacking, ThreadPoolExecutor(1) as stepping:
+        waiting: deque[Future[Assessed]] = deque()
         for unpacked in batches:
-            begun = beside.submit(_assess_batch, unpacked, settings)
-            if waiting is not None:
-                yield waiting.result()
-            waiting = begun
-        if waiting is not None:
-            yield waiting.result()
+            batch = unpacking.submit(unpacked)
+            waiting.append(stepping.submit(_with_figures, batch, settings))
+            if len(waiting) == BATCHES_UNDER_WAY:
+                yield waiting.popleft().result()
+        while waiting:
+            yield waiting.popleft().result()
 
 
-def _assess_batch(unpacked: Callable[[], Profiles], settings: AssessmentSettings) -> Assessed:
-    batch = unpacked()
+def _with_figures(unpacked: Future[Profiles], settings: AssessmentSettings) -> Assessed:
+    batch = unpacked.result()
     figures = assess_fleet(
         batch.load_kva,
         batch.air_temp_c,
@@ -146,7 +167,7 @@ def _assess_batch(unpacked: Callable[[], Profiles], settings: AssessmentSettings
 
 
 def _rows(
-    batch: Profiles, figures: FleetFigures, settings: AssessmentSettings
+    key: int, batch: Profiles, figures: FleetFigures, settings: AssessmentSettings
 ) -> Iterator[dict[str, Any]]:
     """Turn figures into rows of the results table."""
     counted_h = figures.counted_hours
@@ -182,6 +203,7 @@ def _rows(
     ):
         peak_at = batch.start_s + index * step_s
         yield {
+            "assessment_key": key,
             "unit_key": unit_key,
             "site_key": site_key,
             "peak_hot_spot_at": dt.datetime.fromtimestamp(peak_at, dt.UTC) if index >= 0 else None,
@@ -191,18 +213,3 @@ def _rows(
 
 def _or_none(values: Any) -> list[float | None]:
     return [None if value != value else value for value in np.asarray(values).tolist()]  # noqa: PLR0124 - NaN
-
-
-def _summary(
-    key: int, period: Period, settings: AssessmentSettings, rows: list[dict[str, Any]]
-) -> AssessmentSummary:
-    return AssessmentSummary(
-        key,
-        period,
-        settings,
-        units=len(rows),
-        units_without_figures=sum(row["peak_hot_spot_c"] is None for row in rows),
-        units_over_rating=sum(row["hours_over_rating"] > 0 for row in rows),
-        units_over_hot_spot_limit=sum(row["hours_over_hot_spot_limit"] > 0 for row in rows),
-        units_aging_faster_than_normal=sum((row["aging_factor"] or 0) > 1 for row in rows),
-    )

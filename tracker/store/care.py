@@ -61,7 +61,7 @@ def store_info(database: Database) -> dict[str, Any]:
             "last_month": _month_name(months[1]),
             "files_taken_in": count(IntakeFile),
             "rows_refused": count(IntakeRefusal),
-            "assessments": count(Assessment),
+            "assessments": count(Assessment, Assessment.finished_at.is_not(None)),
             "newest_assessment": newest.made_at if newest else None,
         }
 

@@ -226,11 +226,12 @@ class IntakeRefusal(Base):
 
 
 class Assessment(Base):
-    """One run of the thermal model over the fleet."""
+    """One run of the thermal model over the fleet; unfinished ones are shown to nobody."""
 
     __tablename__ = "assessment"
     id: Mapped[int] = mapped_column(primary_key=True)
     made_at: Mapped[dt.datetime]
+    finished_at: Mapped[dt.datetime | None]
     program_version: Mapped[str] = mapped_column(String(40))
     settings: Mapped[dict[str, Any]]
     starts_at: Mapped[dt.datetime]

@@ -7,7 +7,18 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
-from sqlalchemy import ColumnElement, Connection, Select, and_, func, insert, or_, select
+from sqlalchemy import (
+    ColumnElement,
+    Connection,
+    Select,
+    and_,
+    delete,
+    func,
+    insert,
+    or_,
+    select,
+    update,
+)
 
 from tracker.errors import InputError
 from tracker.store.models import Assessment, IntakeFile, Site, Unit, UnitResult
@@ -32,6 +43,9 @@ RANKING_COLUMNS: dict[str, ColumnElement[Any]] = {
 
 TEXT_COLUMNS = frozenset({"unit_id", "site_id", "feeder"})
 HOUR_COLUMNS = frozenset({"hours_over_rating", "hours_over_hot_spot_limit"})
+#: An assessment not finished by then was interrupted.
+FORGOTTEN_AFTER = dt.timedelta(days=1)
+
 HOTTEST_FIRST = (("peak_hot_spot_c", "desc"),)
 
 
@@ -70,7 +84,7 @@ class RankingPage:
 
 
 def latest_assessment(connection: Connection) -> AssessmentRow | None:
-    """Return the newest assessment; None when there is none."""
+    """Return the newest finished assessment; None when there is none."""
     row = connection.execute(
         select(
             Assessment.id,
@@ -81,17 +95,34 @@ def latest_assessment(connection: Connection) -> AssessmentRow | None:
             Assessment.ends_at,
             Assessment.data_fingerprint,
         )
+        .where(Assessment.finished_at.is_not(None))
         .order_by(Assessment.id.desc())
         .limit(1)
     ).first()
     return None if row is None else AssessmentRow(*row)
 
 
-def add_assessment(connection: Connection, **columns: Any) -> int:
-    """Insert an assessment and return its key."""
-    inserted = connection.execute(insert(Assessment).values(**columns)).inserted_primary_key
+def begin_assessment(connection: Connection, **columns: Any) -> int:
+    """Insert an assessment, shown to nobody until it is finished, and return its key.
+
+    Clears away what was begun long ago and never finished.
+    """
+    now = dt.datetime.now(dt.UTC)
+    forgotten = Assessment.finished_at.is_(None) & (Assessment.made_at < now - FORGOTTEN_AFTER)
+    connection.execute(delete(Assessment).where(forgotten))
+    values = {"made_at": now, "data_fingerprint": "", **columns}
+    inserted = connection.execute(insert(Assessment).values(**values)).inserted_primary_key
     assert inserted is not None
     return int(inserted[0])
+
+
+def finish_assessment(connection: Connection, key: int, data_fingerprint: str) -> None:
+    """Show an assessment from now on."""
+    connection.execute(
+        update(Assessment)
+        .where(Assessment.id == key)
+        .values(finished_at=dt.datetime.now(dt.UTC), data_fingerprint=data_fingerprint)
+    )
 
 
 def add_results(connection: Connection, rows: Sequence[Mapping[str, Any]]) -> None:
