@@ -15,8 +15,9 @@ from tracker.dashboard.serve import serve
 from tracker.errors import InputError
 
 SERVE = """
-import sys
+import signal, sys
 from tracker.dashboard.serve import serve
+signal.signal(signal.SIGINT, signal.default_int_handler)  # ignored in what runs in the background
 serve(sys.argv[1], "127.0.0.1", 0, ready=lambda address: print(address, flush=True))
 """
 
@@ -30,12 +31,15 @@ def test_the_address_told_answers_until_interrupted(tmp_path: Path) -> None:
         stderr=subprocess.PIPE,
         text=True,
     ) as process:
-        assert process.stdout is not None
-        address = process.stdout.readline().strip()
-        with urllib.request.urlopen(f"{address}health", timeout=30) as reply:
-            assert reply.status == 200
-        process.send_signal(signal.SIGINT)
-        _, said = process.communicate(timeout=30)
+        try:
+            assert process.stdout is not None
+            address = process.stdout.readline().strip()
+            with urllib.request.urlopen(f"{address}health", timeout=30) as reply:
+                assert reply.status == 200
+            process.send_signal(signal.SIGINT)
+            _, said = process.communicate(timeout=30)
+        finally:
+            process.kill()  # a server that does not stop must not stop the tests
     assert process.returncode == 0
     assert "Traceback" not in said
 
