@@ -36,6 +36,8 @@ def found_intervals(
     (15, 0)
     """
     order = _by_series(series, n_series)
+    if not _rises(series, stamp_s, order):
+        order = np.lexsort((stamp_s, series))
     step_min, phase_min = _intervals(series, stamp_s, order, n_series)
     return step_min, phase_min
 
@@ -55,37 +57,38 @@ def _by_series(series, n_series):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True, nogil=True)
+def _rises(series, stamp_s, order):  # type: ignore[no-untyped-def]
+    """Say whether the stamps of every series come in order of time, as they do in most files."""
+    for at in range(1, len(order)):
+        i, before = order[at], order[at - 1]
+        if series[i] == series[before] and stamp_s[i] < stamp_s[before]:
+            return False
+    return True
+
+
+@njit(cache=True, nogil=True)
 def _intervals(series, stamp_s, order, n_series):  # type: ignore[no-untyped-def]
-    lengths = np.array(INTERVALS_MIN, np.int32)
+    """Walk each series from stamp to stamp; the arrays of counts are those of one series."""
     step_min = np.zeros(n_series, np.int32)
     phase_min = np.full(n_series, -1, np.int32)
-    counts = np.zeros(len(lengths), np.int64)
+    steps = np.zeros(61, np.int64)
     phases = np.zeros(60, np.int64)
-    at = 0
-    while at < len(order):
-        s = series[order[at]]
-        stop = at + 1
-        rising = True
-        while stop < len(order) and series[order[stop]] == s:
-            rising = rising and stamp_s[order[stop]] >= stamp_s[order[stop - 1]]
-            stop += 1
-        own = np.empty(stop - at, np.int64)
-        for k in range(at, stop):
-            own[k - at] = stamp_s[order[k]]
-        if not rising:
-            own.sort()
-        counts[:] = 0
-        phases[:] = 0
-        for k in range(len(own)):
-            phases[(own[k] // 60) % 60] += 1
-            if k:
-                distance = own[k] - own[k - 1]
-                for j in range(len(lengths)):
-                    if distance == 60 * lengths[j]:
-                        counts[j] += 1
-        best = np.argmax(counts)
-        if counts[best] > 0:
-            step_min[s] = lengths[best]
-        phase_min[s] = np.argmax(phases)
-        at = stop
+    for at in range(len(order)):
+        i = order[at]
+        s = series[i]
+        if at == 0 or series[order[at - 1]] != s:
+            steps[:] = 0
+            phases[:] = 0
+        else:
+            distance = stamp_s[i] - stamp_s[order[at - 1]]
+            if 0 < distance <= 3600 and distance % 60 == 0:
+                steps[distance // 60] += 1
+        phases[(stamp_s[i] // 60) % 60] += 1
+        if at == len(order) - 1 or series[order[at + 1]] != s:
+            commonest = 0
+            for length in INTERVALS_MIN:
+                if steps[length] > commonest:
+                    commonest = steps[length]
+                    step_min[s] = length
+            phase_min[s] = np.argmax(phases)
     return step_min, phase_min

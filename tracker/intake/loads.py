@@ -217,7 +217,8 @@ def _decoded(batch: pa.RecordBatch, stamps: StampReader) -> _Batch:
         stamp.place,
         first_s,
         table.second_s[stamp.place] if twice else first_s,
-        pc.fill_null(batch.column("value"), np.nan).to_numpy(zero_copy_only=False),
+        # A copy: arrays that may not be written to are another type to the compiler.
+        np.array(pc.fill_null(batch.column("value"), np.nan).to_numpy(zero_copy_only=False)),
         {row: bad[row].as_py() for row in wrong},
         None if quality.null_count == len(quality) else _texts(quality),
     )

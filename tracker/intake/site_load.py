@@ -169,20 +169,13 @@ def _sum_sites(  # type: ignore[no-untyped-def]
         sums = np.zeros((_N_SUMS, n_value))
         for m in range(first, last):
             if not whole_site[m]:
-                start, stop = places[m]
-                sums[_CONNECTED, start:stop] += weight[m]
                 _add_meter(
-                    sums, flags[site], start, stop, kw[m], kw_flags[m], kva[m], kva_flags[m],
-                    multiplier[m], reactive[m], weight[m],
+                    sums, flags, site, m, places, kw, kw_flags, kva, kva_flags, multiplier, reactive, weight
                 )  # fmt: skip
-        _close_sum(sums, load[site], flags[site])
+        _close_sum(sums, load, flags, site)
         for m in range(first, last):
             if whole_site[m]:
-                start, stop = places[m]
-                _lay_over(
-                    load[site], flags[site], start, stop, kw[m], kw_flags[m], kva[m], kva_flags[m],
-                    reactive[m],
-                )  # fmt: skip
+                _lay_over(load, flags, site, m, places, kw, kw_flags, kva, kva_flags, reactive)
     return load, flags
 
 
@@ -193,50 +186,52 @@ _ACTIVE, _REACTIVE, _APPARENT, _MEASURED, _CONNECTED, _N_SUMS = range(6)
 
 @njit(cache=True, nogil=True)
 def _add_meter(  # type: ignore[no-untyped-def]
-    sums, flags, start, stop, kw, kw_flags, kva, kva_flags, multiplier, reactive, weight
+    sums, flags, site, m, places, kw, kw_flags, kva, kva_flags, multiplier, reactive, weight
 ):
-    for t in range(start, stop):
-        if kva_flags[t]:
-            sums[_APPARENT, t] += kva[t] * multiplier
-            flags[t] |= kva_flags[t]
-        elif kw_flags[t]:
-            sums[_ACTIVE, t] += kw[t] * multiplier
-            sums[_REACTIVE, t] += kw[t] * multiplier * reactive
-            flags[t] |= kw_flags[t]
+    """Add meter `m` where it is connected. Whole arrays, because views of them compile slowly."""
+    for t in range(places[m, 0], places[m, 1]):
+        sums[_CONNECTED, t] += weight[m]
+        if kva_flags[m, t]:
+            sums[_APPARENT, t] += kva[m, t] * multiplier[m]
+            flags[site, t] |= kva_flags[m, t]
+        elif kw_flags[m, t]:
+            sums[_ACTIVE, t] += kw[m, t] * multiplier[m]
+            sums[_REACTIVE, t] += kw[m, t] * multiplier[m] * reactive[m]
+            flags[site, t] |= kw_flags[m, t]
         else:
             continue
-        sums[_MEASURED, t] += weight
+        sums[_MEASURED, t] += weight[m]
 
 
 @njit(cache=True, nogil=True)
-def _close_sum(sums, load, flags):  # type: ignore[no-untyped-def]
+def _close_sum(sums, load, flags, site):  # type: ignore[no-untyped-def]
     """Turn sums into load; scale for missing meters, or leave out what too little is known of."""
-    for t in range(len(load)):
-        if not flags[t]:
+    for t in range(load.shape[1]):
+        if not flags[site, t]:
             continue
         total = math.hypot(sums[_ACTIVE, t], sums[_REACTIVE, t]) + sums[_APPARENT, t]
         missing = sums[_CONNECTED, t] - sums[_MEASURED, t]
         if missing > 1e-9 * sums[_CONNECTED, t]:
             if sums[_MEASURED, t] < LEAST_MEASURED_SHARE * sums[_CONNECTED, t]:
-                flags[t] = 0
+                flags[site, t] = 0
                 continue
             total *= sums[_CONNECTED, t] / sums[_MEASURED, t]
-            flags[t] |= _SCALED
-        load[t] = total
+            flags[site, t] |= _SCALED
+        load[site, t] = total
 
 
 @njit(cache=True, nogil=True)
 def _lay_over(  # type: ignore[no-untyped-def]
-    load, flags, start, stop, kw, kw_flags, kva, kva_flags, reactive
+    load, flags, site, m, places, kw, kw_flags, kva, kva_flags, reactive
 ):
     """What is measured at the transformer stands before the sum of the meters."""
-    for t in range(start, stop):
-        if kva_flags[t]:
-            load[t] = abs(kva[t])
-            flags[t] = kva_flags[t]
-        elif kw_flags[t]:
-            load[t] = abs(kw[t]) * math.sqrt(1.0 + reactive * reactive)
-            flags[t] = kw_flags[t]
+    for t in range(places[m, 0], places[m, 1]):
+        if kva_flags[m, t]:
+            load[site, t] = abs(kva[m, t])
+            flags[site, t] = kva_flags[m, t]
+        elif kw_flags[m, t]:
+            load[site, t] = abs(kw[m, t]) * math.sqrt(1.0 + reactive[m] * reactive[m])
+            flags[site, t] = kw_flags[m, t]
 
 
 @njit(cache=True, nogil=True)
