@@ -34,7 +34,7 @@ from tracker.store.keys import in_parts
 from tracker.thermal.parameters import ThermalParameters
 
 #: Units whose profiles are held in memory at a time.
-UNITS_A_BATCH = 512
+UNITS_A_BATCH = 320
 
 #: Sites looked at together to learn which part of a month is known.
 SITES_LOOKED_AT = 256
