@@ -91,6 +91,7 @@ class Numbers:
 
     def __init__(self, held: Mapping[str, int]) -> None:
         self._number = dict(held)
+        self._name = {number: name for name, number in held.items()}
         self._n_new = 0
 
     def of(self, name: str) -> int:
@@ -98,11 +99,12 @@ class Numbers:
         if name not in self._number:
             self._n_new += 1
             self._number[name] = -self._n_new
+            self._name[-self._n_new] = name
         return self._number[name]
 
     def name(self, number: int) -> str:
         """Return the name of a number."""
-        return next(name for name, each in self._number.items() if each == number)
+        return self._name[number]
 
     def keys(self, held: Mapping[str, int]) -> dict[int, int]:
         """Return the key of every number, once all is written: `held` are the store's keys then."""

@@ -234,42 +234,38 @@ def _put_sites(connection: Connection, frame: pd.DataFrame, given: set[str]) -> 
     Where several rows are of one site, the last that says something counts. What the file has no
     column for, a site that is held keeps.
     """
-    columns = list(fleet.SITE_COLUMNS)
-    named = frame.groupby("site_id", sort=False)[columns].last()
-    wanted = named.astype(object).where(named.notna(), None)
-    held = {row["site_id"]: row for row in fleet.sites(connection)}
-    corrected: set[str] = set()
-    new: list[dict[str, Any]] = []
-    for row in wanted.reset_index().to_dict("records"):
-        values = {str(name): value for name, value in row.items()}
-        site_id = values.pop("site_id")
-        if site_id not in held:
-            new.append({"site_id": site_id, **values})
-            continue
-        said = {name: value for name, value in values.items() if name in given}
-        if any(held[site_id][name] != value for name, value in said.items()):
-            fleet.change_row(connection, Site, held[site_id]["id"], said)
-            corrected.add(site_id)
-    fleet.add_rows(connection, Site, new)
-    return corrected
+    named = frame.groupby("site_id", sort=False)[list(fleet.SITE_COLUMNS)].last()
+    return _put(connection, Site, named, fleet.sites(connection), given)
 
 
 def _put_units(connection: Connection, frame: pd.DataFrame, given: set[str]) -> set[str]:
     """Write the nameplates of the file; return the ids of changed units."""
     named = frame.groupby("unit_id", sort=False)[list(fleet.UNIT_COLUMNS)].first()
+    return _put(connection, Unit, named, fleet.units(connection), given)
+
+
+def _put(
+    connection: Connection,
+    table: type[Unit] | type[Site],
+    named: pd.DataFrame,
+    rows_held: Iterable[dict[str, Any]],
+    given: set[str],
+) -> set[str]:
+    """Write rows that their index names; return the names of those held that changed."""
+    id_column = str(named.index.name)
     wanted = named.astype(object).where(named.notna(), None)
-    held = {row["unit_id"]: row for row in fleet.units(connection)}
+    held = {row[id_column]: row for row in rows_held}
     corrected: set[str] = set()
     new: list[dict[str, Any]] = []
     for row in wanted.reset_index().to_dict("records"):
         values = {str(name): value for name, value in row.items()}
-        unit_id = values["unit_id"]
-        if unit_id not in held:
+        name = values[id_column]
+        if name not in held:
             new.append(values)
             continue
-        said = {name: value for name, value in values.items() if name in given}
-        if any(held[unit_id][name] != value for name, value in said.items()):
-            fleet.change_row(connection, Unit, held[unit_id]["id"], said)
-            corrected.add(unit_id)
-    fleet.add_rows(connection, Unit, new)
+        said = {column: value for column, value in values.items() if column in given}
+        if any(held[name][column] != value for column, value in said.items()):
+            fleet.change_row(connection, table, held[name]["id"], said)
+            corrected.add(name)
+    fleet.add_rows(connection, table, new)
     return corrected
