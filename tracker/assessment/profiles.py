@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 from sqlalchemy import Connection
 
 from tracker.errors import InputError
-from tracker.fleet.nameplate import Nameplate, thermal_parameters
+from tracker.fleet.nameplate import thermal_parameters
 from tracker.store import fleet
 from tracker.store import readings as held_readings
 from tracker.store.blocks import (
@@ -291,17 +291,13 @@ def _profiles(
         [unit["id"] for unit in units],
         [own[-1].site_key if own else None for own in stays],
         np.array([_hours(own, plan.period) for own in stays]),
-        thermal_parameters(_nameplate(unit) for unit in units),
+        thermal_parameters(fleet.nameplate(unit) for unit in units),
         load,
         air,
         station_index,
         step_min,
         plan.period.start_s,
     )
-
-
-def _nameplate(unit: Mapping[str, Any]) -> Nameplate:
-    return Nameplate(**{name: unit[name] for name in fleet.NAMEPLATE_COLUMNS})
 
 
 def _n_time(period: Period, step_min: int) -> int:

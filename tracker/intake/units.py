@@ -11,7 +11,7 @@ import pandas as pd
 from sqlalchemy import Connection
 
 from tracker.errors import ModelRangeError
-from tracker.fleet.nameplate import COOLING_FLOW, Nameplate, completed
+from tracker.fleet.nameplate import COOLING_FLOW, completed
 from tracker.intake.register import Column, read_register
 from tracker.intake.report import Fates, FileReport, Finding
 from tracker.intake.site_load import derive_sites
@@ -199,7 +199,7 @@ def _checked_nameplates(frame: pd.DataFrame) -> tuple[pd.DataFrame, list[Finding
     suspects = frame[frame["hot_spot_rise_c"].notna() | frame["top_oil_rise_c"].notna()]
     for ordinal, row in suspects.iterrows():
         try:
-            completed(_nameplate(row))
+            completed(fleet.nameplate(row.to_dict()))
         except ModelRangeError as error:
             findings.append(
                 Finding(int(str(ordinal)), "hot_spot_rise_c", "hot_spot_rise_c.too_low", str(error))
@@ -222,10 +222,6 @@ def _without_contradictions(frame: pd.DataFrame) -> tuple[pd.DataFrame, list[Fin
         )
         findings.append(Finding(ordinal, column, f"{column}.two_values", reason))
     return frame.drop(index=[finding.ordinal for finding in findings]), findings
-
-
-def _nameplate(row: Mapping[str, Any] | pd.Series) -> Nameplate:
-    return Nameplate(**{name: row[name] for name in fleet.NAMEPLATE_COLUMNS})
 
 
 def _put_sites(connection: Connection, frame: pd.DataFrame, given: set[str]) -> set[str]:

@@ -8,7 +8,7 @@ from dataclasses import dataclass, fields
 from operator import itemgetter
 from typing import Any
 
-from sqlalchemy import Connection, delete, insert, select, update
+from sqlalchemy import Connection, RowMapping, delete, insert, select, update
 
 from tracker.errors import InputError
 from tracker.fleet.nameplate import Nameplate
@@ -24,6 +24,11 @@ UNIT_COLUMNS = tuple(
 SITE_COLUMNS = tuple(
     column.key for column in Site.__table__.columns if column.key not in ("id", "site_id")
 )
+
+
+def nameplate(row: Mapping[Any, Any] | RowMapping) -> Nameplate:
+    """Return the nameplate in a row of the register, given under its columns' names."""
+    return Nameplate(**{name: row[name] for name in NAMEPLATE_COLUMNS})
 
 
 @dataclass(frozen=True, slots=True)
@@ -94,7 +99,7 @@ def unit_record(connection: Connection, unit_id: str) -> UnitRecord:
     return UnitRecord(
         row.id,
         row.unit_id,
-        Nameplate(**{name: getattr(row, name) for name in NAMEPLATE_COLUMNS}),
+        nameplate(row._mapping),
         row.hv_volts,
         row.lv_volts,
         row.impedance_pct,
