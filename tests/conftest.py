@@ -98,7 +98,7 @@ class Utility:
 def fates(report: FileReport) -> tuple[int, int, int, int]:
     """Return how many rows were taken, unchanged, corrected and refused."""
     counts = report.fates
-    return counts.taken, counts.unchanged, counts.corrected, len(report.refusals)
+    return counts.taken, counts.unchanged, counts.corrected, report.refused
 
 
 def hourly_csv(

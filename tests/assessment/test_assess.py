@@ -66,13 +66,19 @@ def test_without_gaps_coverage_is_all(week) -> None:
     assert counted_hours(week.database) == [6 * DAY]
 
 
-@pytest.mark.parametrize("what", ["load", "air"])
 @pytest.mark.parametrize(
-    ("gap_h", "uncounted_h"),
-    [(1, 1), (10, 10), (24, 24), (25, 25 + 24), (40, 40 + 24)],
+    ("what", "gap_h", "uncounted_h", "uncovered_h"),
+    [
+        ("load", 1, 0, 1),  # filled by a straight line: counted, and not measured
+        *(("load", hours, hours, hours) for hours in (3, 10, 24)),
+        *(("air", hours, 0, 0) for hours in (1, 3)),  # bridged by a straight line
+        *(("air", hours, hours, hours) for hours in (4, 10, 24)),
+        *((what, hours, hours + 24, hours + 24) for what in ("load", "air") for hours in (25, 40)),
+    ],
 )
-def test_a_gap_lowers_coverage(utility, hourly_csv, what, gap_h, uncounted_h) -> None:
-    """A hole of more than 24 h also costs the 24 h that warm the state up anew."""
+def test_a_gap_lowers_coverage(utility, hourly_csv, what, gap_h, uncounted_h, uncovered_h) -> None:
+    """A hole of more than 24 h also costs the 24 h that warm the state up anew. The load is constant,
+    so that energy goes by hours."""
     load = np.full(7 * DAY, 20.0)
     utility.take("units", "unit_id,rated_kva\nT,25\n")
     air = weather_csv(7 * DAY).splitlines(keepends=True)
@@ -84,7 +90,7 @@ def test_a_gap_lowers_coverage(utility, hourly_csv, what, gap_h, uncounted_h) ->
     utility.take("weather", "".join(air))
     assess(utility.database)
     assert counted_hours(utility.database) == [6 * DAY - uncounted_h]
-    wanted = 100 * (6 * DAY - uncounted_h) / (6 * DAY)
+    wanted = 100 * (6 * DAY - uncovered_h) / (6 * DAY)
     assert rows_of(utility.database)["T"]["coverage_pct"] == pytest.approx(wanted)
 
 

@@ -1,7 +1,8 @@
 """One piece of work in a process of its own, so that its memory is its own.
 
-`one_process.py import FOLDER STORE` takes in the loads of a folder, `one_process.py sum FOLDER` lets
-DuckDB parse every column of the same file and sum it by meter. Prints seconds and peak memory.
+`one_process.py import FOLDER STORE` takes in the loads of a folder, into a new store; `day FOLDER
+STORE` into one that is there; `sum FOLDER` lets DuckDB parse every column of the same file and sum
+it by meter. Prints seconds and peak memory.
 """
 
 from __future__ import annotations
@@ -22,6 +23,17 @@ def importing(folder: Path, store: str) -> Callable[[], None]:
     database = open_database(store)
     take_file(database, "units", folder / "units.csv")
     take_file(database, "connections", folder / "connections.csv")
+
+    database.close()
+    return a_day(folder, store)
+
+
+def a_day(folder: Path, store: str) -> Callable[[], None]:
+    """Open a store; return what takes in the readings."""
+    from tracker.intake.files import take_file
+    from tracker.store.schema import open_database
+
+    database = open_database(store)
 
     def work() -> None:
         report = take_file(database, "loads", folder / "loads.csv")
@@ -62,7 +74,7 @@ def peak_mb() -> float:
 
 def main(task: str, folder: str, *store: str) -> None:
     """Do the work, timed once everything is loaded."""
-    work = {"import": importing, "sum": summing}[task](Path(folder), *store)
+    work = {"import": importing, "day": a_day, "sum": summing}[task](Path(folder), *store)
     began, processor_began = time.perf_counter(), time.process_time()
     work()
     said = {

@@ -1,4 +1,4 @@
-"""How fast it is: against the readable form, against the bare kernel, against a bare parse.
+"""How fast the model is: against the readable form, against the bare kernel.
 
     pytest tests/benchmarks -m slow        the sizes that figures are quoted for
     pytest tests/benchmarks -m "not slow"  small ones, to see that everything still runs
@@ -11,10 +11,8 @@ from __future__ import annotations
 import itertools
 from collections.abc import Iterator
 from dataclasses import dataclass
-from pathlib import Path
 from typing import Any
 
-import duckdb
 import numpy as np
 import pandas as pd
 import pytest
@@ -47,8 +45,6 @@ class Size:
     kernel_units: int
     store_units: int
     months: int
-    meters: int
-    hours: int  #: of each meter in the file
 
     @property
     def n_time(self) -> int:
@@ -62,9 +58,9 @@ class Size:
         return range(first, first + self.months)
 
 
-#: 2,000 units and 5,000 units of a year of hours; 20 million rows.
-FULL = Size(kernel_units=2_000, store_units=5_000, months=12, meters=2_284, hours=8_760)
-SMALL = Size(kernel_units=70, store_units=70, months=1, meters=24, hours=240)
+#: 2,000 units and 5,000 units of a year of hours.
+FULL = Size(kernel_units=2_000, store_units=5_000, months=12)
+SMALL = Size(kernel_units=70, store_units=70, months=1)
 
 
 @pytest.fixture(
@@ -227,78 +223,3 @@ def test_kernel_alone(stopwatch: Any, store: Database, size: Size) -> None:
         items=size.store_units * size.n_time,
     )
     assert sum(len(batch.aging_hours) for batch in figures) == size.store_units
-
-
-# --- An import against a bare parse and sum -------------------------------------------------------
-
-METERS_A_UNIT = 4
-
-#: Row i of the file: which meter, and which hour.
-ORDERS = {
-    "meter by meter": ("i // {hours}", "i % {hours}"),
-    "hour by hour": ("i % {meters}", "i // {meters}"),
-}
-
-
-@dataclass(frozen=True)
-class LongFile:
-    """A folder with units, connections and one long file of hourly readings."""
-
-    folder: Path
-    order: str  #: how its rows follow each other
-    n_row: int
-
-
-@pytest.fixture(
-    scope="module",
-    params=[
-        pytest.param((SMALL, "meter by meter"), id="small"),
-        pytest.param((FULL, "meter by meter"), id="full-by-meter", marks=pytest.mark.slow),
-        pytest.param((FULL, "hour by hour"), id="full-by-hour", marks=pytest.mark.slow),
-    ],
-)
-def long_file(
-    request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory
-) -> Iterator[LongFile]:
-    """A file as a utility would send it: of each meter all hours, or of each hour all meters."""
-    size, order = request.param
-    folder = tmp_path_factory.mktemp("long_file")
-    meter, hour = (each.format(meters=size.meters, hours=size.hours) for each in ORDERS[order])
-    n_row = size.meters * size.hours
-    statements = (
-        f"""COPY (SELECT format('U-{{:05d}}', i) AS unit_id, 50 AS rated_kva
-            FROM range({size.meters // METERS_A_UNIT}) r(i)) TO '{folder}/units.csv'""",
-        f"""COPY (SELECT format('M-{{:07d}}', i) AS meter_id,
-                         format('U-{{:05d}}', i // {METERS_A_UNIT}) AS unit_id
-            FROM range({size.meters}) r(i)) TO '{folder}/connections.csv'""",
-        f"""COPY (SELECT format('M-{{:07d}}', {meter}) AS meter_id,
-                         strftime(TIMESTAMP '2025-01-01' + to_hours({hour}),
-                                  '%Y-%m-%dT%H:%M:%SZ') AS read_at,
-                         (0.2 + 2.8 * (hash(i) % 1000) / 1000)::DECIMAL(8, 3) AS kwh
-            FROM range({n_row}) r(i)) TO '{folder}/loads.csv'""",
-    )
-    for statement in statements:
-        duckdb.execute(statement)
-    yield LongFile(folder, order, n_row)
-    (folder / "loads.csv").unlink()
-
-
-def test_import(stopwatch: Any, long_file: LongFile, tmp_path: Path) -> None:
-    """Every reading checked and kept, and the load of every site derived; into an empty store."""
-    stores = (f"sqlite:///{tmp_path / f'{number}.db'}" for number in itertools.count())
-    stopwatch.time_process(
-        f"import, {long_file.order}",
-        lambda: ["import", long_file.folder, next(stores)],
-        items=long_file.n_row,
-        of="row",
-    )
-
-
-def test_bare_parse_and_sum(stopwatch: Any, long_file: LongFile) -> None:
-    """DuckDB parses the same file and sums it by meter."""
-    stopwatch.time_process(
-        f"bare parse and sum, {long_file.order}",
-        lambda: ["sum", long_file.folder],
-        items=long_file.n_row,
-        of="row",
-    )

@@ -11,6 +11,8 @@ from pathlib import Path
 
 import pytest
 
+from tracker.store.schema import HEAD
+
 UNITS = "unit_id,rated_kva,feeder\nT-1,10,F-1\nT-2,50,F-2\n=T-3,50,\n"
 BAD_UNITS = "unit_id,rated_kva\nT-1,10\nT-2,none\n,5\n"
 
@@ -188,9 +190,9 @@ def test_export(tracker, filled) -> None:
 def test_store_commands(tracker, filled) -> None:
     """What it holds, that it is sound, and that it is up to date."""
     info = tracker("store", "info", "--json").data
-    assert (info["units"], info["assessments"], info["revision"]) == (3, 1, "0001")
+    assert (info["units"], info["assessments"], info["revision"]) == (3, 1, HEAD)
     assert tracker("store", "check", "--json").data == {"sound": True, "problems": []}
-    assert tracker("store", "upgrade", "--json").data == {"before": "0001", "after": "0001"}
+    assert tracker("store", "upgrade", "--json").data == {"before": HEAD, "after": HEAD}
 
 
 def test_an_unsound_store_exits_with_1(tracker, filled) -> None:

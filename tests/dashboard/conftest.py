@@ -129,7 +129,11 @@ def fill(database: Database) -> None:
         for month, values in _months(air_c):
             connection.execute(
                 insert(ReadingBlock).values(
-                    series_key=1, quantity="air_temp_c", month=month, payload=_packed(values)[0]
+                    series_key=1,
+                    quantity="air_temp_c",
+                    month=month,
+                    n_held=values.shape[1],
+                    payload=_packed(values)[0],
                 )
             )
         for month, values in _months(load_kva[:238]):

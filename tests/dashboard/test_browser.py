@@ -200,6 +200,8 @@ def test_dragging_zooms_all_panels(quiet: Page, fleet_url: str) -> None:
     quiet.goto(f"{fleet_url}unit?unit_id={GAPPY}")
     panel = quiet.locator("#unit-figure .nsewdrag").first
     expect(panel).to_be_visible()
+    expect(quiet.locator("#unit-facts .key-figures")).to_be_visible()  # nothing moves any more
+    panel.scroll_into_view_if_needed()
     box = panel.bounding_box()
     assert box is not None
     middle = box["y"] + box["height"] / 2
@@ -229,6 +231,31 @@ def test_export_is_the_file_of_the_command(quiet: Page, fleet_url: str, fleet: D
         quiet.get_by_role("link", name="Export priority list").click()
     assert download.value.suggested_filename == "priority_list.csv"
     assert download.value.path().read_bytes() == csv_text(priority_list(fleet)).encode()
+
+
+def test_doubts_are_one_press_from_the_ranking(quiet: Page, fleet_url: str) -> None:
+    """The page opens, says that hints are no verdicts, and keeps the feeder in its address."""
+    quiet.goto(fleet_url)
+    quiet.get_by_role("link", name="Connections in doubt").click()
+    expect(quiet.get_by_role("heading", level=1)).to_have_text("Connections in doubt")
+    expect(quiet.locator(".notice")).to_contain_text("not verdicts")
+    expect(quiet.locator("#doubtful-shown")).to_have_text(re.compile(r"^\d+ doubts?$"))
+    quiet.goto(f"{fleet_url}doubtful?feeder=LK-21+Orchard")
+    expect(quiet.get_by_role("textbox", name="Feeder")).to_have_value("LK-21 Orchard")
+    quiet.set_viewport_size({"width": 390, "height": 844})
+    assert quiet.evaluate("document.documentElement.scrollWidth") <= 390
+    quiet.get_by_role("link", name="← Ranking").click()
+    expect(cell(quiet, 0, "unit_id")).to_have_text(HOTTEST)
+
+
+def test_a_unit_short_of_data_is_told_apart(quiet: Page, fleet_url: str) -> None:
+    """The word in its row, and the reason on its page."""
+    quiet.goto(f"{fleet_url}?coverage_pct=below:80")
+    expect(cell(quiet, 0, "place")).to_have_text("apart")
+    expect(cell(quiet, 0, "peak_hot_spot_c")).to_contain_text("% of its energy is measured")
+    quiet.goto(f"{fleet_url}unit?unit_id={GAPPY}")
+    expect(quiet.locator("#unit-news")).to_contain_text("Ranked apart: only")
+    expect(quiet.locator("#unit-facts")).to_contain_text("ranked apart")
 
 
 @pytest.mark.parametrize("path", ["", f"unit?unit_id={HOTTEST}"], ids=["ranking", "unit"])

@@ -14,7 +14,7 @@ from hypothesis import strategies as st
 from sqlalchemy import event, insert
 
 from tracker.dashboard.app import create_app
-from tracker.dashboard.pages import ranking
+from tracker.dashboard.pages import ranking, unit
 from tracker.dashboard.view import (
     HEADINGS,
     View,
@@ -31,7 +31,7 @@ from tracker.store.models import Assessment, IntakeFile, Unit
 from tracker.store.results import RANKING_COLUMNS, TEXT_COLUMNS, Filter
 from tracker.store.schema import open_database
 
-from .conftest import FEEDERS, HOTTEST, N_UNIT, NO_DATA, NOWHERE
+from .conftest import FEEDERS, GAPPY, HOTTEST, N_UNIT, NO_DATA, NOWHERE
 
 
 def block(start: int = 0, stop: int = 100, **extra: Any) -> dict[str, Any]:
@@ -68,7 +68,7 @@ def test_hottest_first_unless_asked_otherwise(fleet: Database) -> None:
 
 @pytest.mark.parametrize("way", ["asc", "desc"])
 @pytest.mark.parametrize("column", list(HEADINGS))
-def test_order_is_global_and_units_without_figures_come_last(
+def test_order_is_global_and_units_apart_or_without_figures_come_last(
     fleet: Database, column: str, way: str
 ) -> None:
     """Every column sorts in the database over all rows, not within a block."""
@@ -76,12 +76,37 @@ def test_order_is_global_and_units_without_figures_come_last(
     pieces = [ranking.rows_for(fleet, block(s, s + 80, **ask))["rowData"] for s in (0, 80, 160)]
     rows = [row for piece in pieces for row in piece]
     assert len({row["unit_id"] for row in rows}) == N_UNIT
-    values = [row[column] for row in rows]
-    known = [value for value in values if value != "–"]
-    assert values[: len(known)] == known
-    text = column in TEXT_COLUMNS or column == "peak_hot_spot_at"
-    keys = known if text else [float(value.replace(",", "")) for value in known]
-    assert keys == sorted(keys, reverse=way == "desc")  # type: ignore[type-var]
+    standings = [_standing_of(row) for row in rows]
+    assert standings == sorted(standings)
+    for standing in set(standings):
+        values = [row[column] for row in rows if _standing_of(row) == standing]
+        known = [value for value in values if value != "–"]
+        assert values[: len(known)] == known
+        text = column in TEXT_COLUMNS or column == "peak_hot_spot_at"
+        keys = known if text else [float(value.replace(",", "")) for value in known]
+        assert keys == sorted(keys, reverse=way == "desc")  # type: ignore[type-var]
+
+
+def _standing_of(row: dict[str, Any]) -> int:
+    """Return 0 for a ranked unit, 1 for one that stands apart, 2 for one without figures."""
+    if row["peak_hot_spot_c"] == "–":
+        return 2
+    return int(row["apart"])
+
+
+def test_a_unit_short_of_data_stands_apart_with_word_and_reason(fleet: Database) -> None:
+    """It is told by words in its row, not by a colour, and the ranked keep their places."""
+    rows = ranking.rows_for(fleet, block(N_UNIT - 4, N_UNIT))["rowData"]
+    assert [row["place"] for row in rows] == [str(N_UNIT - 3), "apart", "239", "240"]
+    apart = rows[1]
+    assert apart["unit_id"] == GAPPY
+    assert (
+        apart["heat_words"]
+        == f"only {int(float(apart['coverage_pct']))} % of its energy is measured"
+    )
+    page = unit.unit_page(fleet, GAPPY)
+    assert unit.place_words(page) == "ranked apart"
+    assert unit.place_words(unit.unit_page(fleet, HOTTEST)) == f"1 of {N_UNIT}"
 
 
 def test_units_without_data_say_why(fleet: Database) -> None:

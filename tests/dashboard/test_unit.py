@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import datetime as dt
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -10,11 +11,13 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from tracker.assessment.daily import aging_by_day, life_used_by_day
+from tracker.assessment.trace import UnitTrace
 from tracker.dashboard.app import create_app
-from tracker.dashboard.figures import Limits, limit_lines, thinned, unit_figure
+from tracker.dashboard.figures import PANELS, Limits, limit_lines, thinned, unit_figure
 from tracker.dashboard.pages import unit
 from tracker.errors import InputError
 from tracker.fleet.cautions import CAUTIONS
+from tracker.store.blocks import Quality
 from tracker.store.engine import Database
 
 from .conftest import GAPPY, HOTTEST, N_UNIT, NO_DATA, NOWHERE
@@ -83,6 +86,75 @@ def test_gaps_stay_gaps_in_the_figure(fleet: Database) -> None:
         assert np.isnan(np.asarray(by_name[name].y)[400])
         assert by_name[name].connectgaps is False
     assert "h without load" in unit.missing_words(trace)
+
+
+# --- How the load came about ----------------------------------------------------------------------
+
+
+def of_origins(fleet: Database, **hours_of_flag: int) -> UnitTrace:
+    """Return the hottest unit's trace as if hours of it, one kind after the other, were not measured."""
+    trace, _ = unit.trace_for(fleet, HOTTEST)
+    flags, share = trace.load_flags.copy(), np.ones(len(trace.load_kva))
+    start = 100
+    for name, n_hour in hours_of_flag.items():
+        flags[start : start + n_hour] |= np.uint8(Quality[name])
+        if name != "DOUBTFUL":
+            share[start : start + n_hour] = 0.5
+        start += 50
+    return replace(trace, load_flags=flags, measured_share=share)
+
+
+def test_a_measured_load_is_said_to_be(fleet: Database) -> None:
+    """Nothing is marked where nothing was filled, and the figure is as it was."""
+    trace, limits = unit.trace_for(fleet, HOTTEST)
+    assert unit.origin_words(trace) == "All of the load was measured."
+    figure = unit_figure(trace, limits, unit.span_of(trace, "all"))
+    assert len(figure.data) == 6
+    assert figure.layout.yaxis.domain == PANELS[0].domain
+
+
+def test_the_page_says_how_the_load_came_about(fleet: Database) -> None:
+    """Shares and hours by hand, in words; a spread hour is no estimate of the utility's."""
+    trace = of_origins(fleet, FILLED=2, LIKE_DAYS=30, SCALED=10, DOUBTFUL=5)
+    unmeasured = 0.5 * np.nansum(trace.load_kva[trace.measured_share < 1])
+    share_pct = 100 * (1 - unmeasured / np.nansum(trace.load_kva))
+    assert unit.origin_words(trace) == (
+        f"Of the load's energy {share_pct:.1f} % was measured. Some of the load is filled by a "
+        "straight line in 2 h, filled by like days in 30 h, scaled up for missing meters in 10 h "
+        "and doubtful but kept in 5 h."
+    )
+    spread = of_origins(fleet, SPREAD=40)
+    spread.load_flags[100:140] |= np.uint8(Quality.ESTIMATED)
+    assert "spread from monthly energy in 40 h." in unit.origin_words(spread)
+    assert "estimated" not in unit.origin_words(spread)
+    assert "estimated by the utility in 7 h" in unit.origin_words(of_origins(fleet, ESTIMATED=7))
+
+
+def test_bridged_air_is_said(fleet: Database) -> None:
+    """What heats the unit from outside was not all read either."""
+    trace, _ = unit.trace_for(fleet, HOTTEST)
+    bridged = np.zeros(len(trace.air_temp_c), dtype=np.bool_)
+    bridged[50:53] = True
+    words = unit.origin_words(replace(trace, air_filled=bridged))
+    assert words.endswith("The air temperature is bridged by a straight line in 3 h.")
+
+
+def test_each_origin_has_a_lane_of_its_own(fleet: Database) -> None:
+    """The lane's place and its words tell what it is: all of them are of one colour."""
+    trace = of_origins(fleet, FILLED=2, DOUBTFUL=5)
+    _, limits = unit.trace_for(fleet, HOTTEST)
+    figure = unit_figure(trace, limits, unit.span_of(trace, "all"))
+    lanes = [each for each in figure.data if each.yaxis == "y5"]
+    assert [lane.name for lane in lanes] == ["filled by a straight line", "doubtful but kept"]
+    assert len({lane.line.color for lane in lanes}) == 1
+    assert len({np.nanmin(lane.y) for lane in lanes}) == 2
+    for lane, first, n_hour in zip(lanes, (100, 150), (2, 5), strict=True):
+        start_s = trace.interval_start_s[first]
+        seconds = np.asarray(lane.x).astype("datetime64[s]").astype(int)
+        assert seconds[:2].tolist() == [start_s, start_s + 3600 * n_hour]
+    words = [note.text for note in figure.layout.annotations if note.yref == "y5"]
+    assert words == ["filled by a straight line, 2 h", "doubtful but kept, 5 h"]
+    assert figure.layout.yaxis.domain[0] > figure.layout.yaxis5.domain[1]
 
 
 @pytest.mark.parametrize("unit_id", [NO_DATA, NOWHERE])

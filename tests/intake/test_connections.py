@@ -6,10 +6,12 @@ import numpy as np
 import pytest
 
 from tracker.errors import IntakeError
+from tracker.intake.site_load import site_loads
 from tracker.store.models import MeterConnection, SiteLoadBlock
 
 UNITS = "unit_id,rated_kva,site_id\nT-1,25,S-1\nT-2,25,S-2\n"
 METERS = "meter_id,read_at,kw\n"
+JULY = 666  #: months since January 1970
 
 
 @pytest.fixture
@@ -47,12 +49,16 @@ def test_a_meter_may_hang_on_a_unit_or_a_site(two_sites, fates) -> None:
         ("M,T-1,,,,0", "multiplier.not_allowed", "above 0"),
         ("M,T-1,,,,-40", "multiplier.not_allowed", "above 0"),
         ("M,T-1,,,,nan", "multiplier.not_allowed", "above 0"),
+        ("M,T-1,,,,1,0", "power_factor.not_allowed", "above 0, up to 1"),
+        ("M,T-1,,,,1,1.01", "power_factor.not_allowed", "above 0, up to 1"),
+        ("GOOD,T-2,,,,1,,shop", "class.two_values", "GOOD, which says home"),
     ],
 )
 def test_what_leads_nowhere_is_refused(two_sites, fates, row, code, word) -> None:
     """A meter hung on the wrong unit heats the wrong unit."""
-    heading = "meter_id,unit_id,site_id,starts_on,ends_on,multiplier\n"
-    report = two_sites.take("connections", heading + "GOOD,T-2,,,,\n" + row + "\n")
+    heading = "meter_id,unit_id,site_id,starts_on,ends_on,multiplier,power_factor,class\n"
+    row += "," * (7 - row.count(","))
+    report = two_sites.take("connections", heading + "GOOD,T-2,,,,,,home\n" + row + "\n")
     assert fates(report) == (1, 0, 0, 1)
     (refusal,) = report.refusals
     assert (refusal.line, refusal.code, refusal.text) == (3, code, row)
@@ -130,6 +136,95 @@ def test_a_corrected_connection_derives_the_load_anew(two_sites, fates) -> None:
     assert len(two_sites.site_load("S-1")) == 0
     np.testing.assert_allclose(two_sites.site_load("S-2"), 6.0, rtol=1e-6)
     assert two_sites.count(SiteLoadBlock) == 1
+    assert two_sites.problems() == []
+
+
+def test_the_power_factor_of_a_connection_by_hand(two_sites, fates) -> None:
+    """4 kW at 0.8 are 5 kVA; a changed one derives the sites it touches anew, and stands before the one
+    given with the readings."""
+    two_sites.take("loads", two_days("M", 4.0), power_factor=0.5)
+    heading = "meter_id,site_id,power_factor\n"
+    two_sites.take("connections", heading + "M,S-1,0.8\n")
+    np.testing.assert_allclose(two_sites.site_load("S-1"), 5.0, rtol=1e-6)
+    assert fates(two_sites.take("connections", heading + "M,S-1,0.8\n")) == (0, 1, 0, 0)
+    assert fates(two_sites.take("connections", heading + "M,S-1,1\n")) == (0, 0, 1, 0)
+    np.testing.assert_allclose(two_sites.site_load("S-1"), 4.0, rtol=1e-6)
+    assert fates(two_sites.take("connections", heading + "M,S-1,\n")) == (0, 0, 1, 0)
+    np.testing.assert_allclose(two_sites.site_load("S-1"), 8.0, rtol=1e-6)
+    assert two_sites.problems() == []
+
+
+def test_a_connection_touches_its_own_sites_alone(two_sites, monkeypatch) -> None:
+    """A correction must cost what it touches, not what is held."""
+    two_sites.take("loads", two_days("M", 4.0) + two_days("N", 4.0).partition("\n")[2])
+    two_sites.take("connections", "meter_id,site_id\nM,S-1\nN,S-2\n")
+    derived: list[set[tuple[int, int]]] = []
+
+    def noted(connection, site_months):
+        derived.append(set(site_months))
+        return site_loads(connection, derived[-1])
+
+    monkeypatch.setattr("tracker.intake.site_load.site_loads", noted)
+    two_sites.take("connections", "meter_id,site_id,multiplier\nM,S-1,2\nN,S-2,1\n")
+    assert derived == [{(1, JULY)}]
+
+
+def test_a_silent_meter_is_missed_from_the_day_it_is_connected(two_sites) -> None:
+    """A meter that was never read raises the load of its site, also in months that have been read
+    already."""
+    two_sites.take("loads", two_days("M", 1.9) + two_days("N", 1.9).partition("\n")[2])
+    two_sites.take("connections", "meter_id,site_id\nM,S-1\nN,S-1\n")
+    np.testing.assert_allclose(two_sites.site_load("S-1"), 4.0, rtol=1e-6)
+    two_sites.take("connections", "meter_id,site_id,starts_on\nSILENT,S-1,2025-07-02\n")
+    np.testing.assert_allclose(two_sites.site_load("S-1"), [4.0] * 24 + [6.0] * 24, rtol=1e-6)
+    assert two_sites.problems() == []
+
+
+def test_the_class_of_a_meter(two_sites, fates) -> None:
+    """A blank leaves what is held; another one is a correction."""
+    heading = "meter_id,site_id,class\n"
+    assert fates(two_sites.take("connections", heading + "M,S-1,home\n")) == (1, 0, 0, 0)
+    assert fates(two_sites.take("connections", heading + "M,S-1,home\n")) == (0, 1, 0, 0)
+    assert fates(two_sites.take("connections", heading + "M,S-1,\n")) == (0, 1, 0, 0)
+    assert fates(two_sites.take("connections", heading + "M,S-1,shop\n")) == (0, 0, 1, 0)
+    assert fates(two_sites.take("connections", heading + "M,S-9,farm\n")) == (0, 0, 0, 1)
+    with two_sites.database.reading() as connection:
+        found = connection.exec_driver_sql("SELECT customer_class FROM series WHERE name = 'M'")
+        assert found.scalar() == "shop"
+
+
+@pytest.mark.parametrize(
+    ("row", "kva"),
+    [("T-1,25,1,240,S-1", 24.0), ("T-1,25,3,240,S-1", 41.57), ("T-1,25,1,480,S-1", 48.0)],
+)
+def test_a_changed_nameplate_derives_the_load_anew(two_sites, row, kva) -> None:
+    """Amperes count by the volts and phases of the unit: 100 A at 240 V are 24 kVA, times the root of
+    three with three phases."""
+    two_sites.take("loads", two_days("M", 100.0).replace(",kw", ",amps_lv"))
+    two_sites.take("connections", "meter_id,site_id\nM,S-1\n")
+    assert len(two_sites.site_load("S-1")) == 0
+    two_sites.take("units", f"unit_id,rated_kva,phases,lv_volts,site_id\n{row}\n")
+    np.testing.assert_allclose(two_sites.site_load("S-1"), kva, rtol=1e-4)
+    assert two_sites.problems() == []
+
+
+def test_a_changed_rating_or_placement_looks_at_the_readings_anew(two_sites) -> None:
+    """What is impossible behind 25 kVA is possible behind 250; and so it is when such a unit stands
+    there from the second day on."""
+    two_sites.take("connections", "meter_id,site_id\nM,S-1\n")
+    text = two_days("M", 1.0).replace("02T12:00Z,1.0", "02T12:00Z,150")
+    two_sites.take("loads", text, power_factor=1)
+    assert two_sites.site_load("S-1").max() == 1.0
+    two_sites.take("units", "unit_id,rated_kva,site_id\nT-1,250,S-1\n")
+    assert two_sites.site_load("S-1").max() == 150.0
+    two_sites.take("units", "unit_id,rated_kva,site_id\nT-1,25,S-1\n")
+    assert two_sites.site_load("S-1").max() == 1.0
+    two_sites.take(
+        "units",
+        "unit_id,rated_kva,site_id,installed_on,removed_on\n"
+        "T-1,25,S-1,,2025-07-02\nT-9,250,S-1,2025-07-02,\n",
+    )
+    assert two_sites.site_load("S-1").max() == 150.0
     assert two_sites.problems() == []
 
 

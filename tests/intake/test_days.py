@@ -16,8 +16,8 @@ SPRING, AUTUMN, ORDINARY = "2025-03-09", "2025-11-02", "2025-07-01"
 
 @pytest.fixture
 def site(new_utility, made_store, tmp_path):
-    """One site with one meter, M."""
-    units, connections = "unit_id,rated_kva,site_id\nT,25,S\n", "meter_id,site_id\nM,S\n"
+    """One site with one meter, M, behind a unit that may carry whatever the tests bring."""
+    units, connections = "unit_id,rated_kva,site_id\nT,10000,S\n", "meter_id,site_id\nM,S\n"
     return new_utility(tmp_path, made_store(("units", units), ("connections", connections)))
 
 
@@ -109,7 +109,7 @@ def test_blank_cells_count_as_nothing(site, fates) -> None:
     cells[3], cells[10], cells[23] = "", "  ", ""
     report = site.take("loads", days(hour_names(24), {ORDINARY: cells}), timezone="UTC")
     assert fates(report) == (21, 0, 0, 0)
-    assert len(site.site_load("S")) == 21
+    assert len(site.readings("M")) == 21
 
 
 def test_bad_cells_are_refused_one_by_one(site, fates) -> None:
@@ -132,8 +132,8 @@ def test_bad_cells_are_refused_one_by_one(site, fates) -> None:
         ("meter_id,M", "", "stamp.blank"),
         ("meter_id,M", "1815-06-18", "stamp.out_of_range"),
         ("meter_id,M", "9999-12-31", "stamp.out_of_range"),
-        ("meter_id,", "2025-07-01", "id.unusable"),
-        ("meter_id," + "m" * 121, "2025-07-01", "id.unusable"),
+        ("meter_id,", "2025-07-01", "id.blank"),
+        ("meter_id," + "m" * 121, "2025-07-01", "id.too_long"),
     ],
 )
 def test_a_day_that_cannot_be_placed_refuses_its_cells(site, fates, who, date, code) -> None:

@@ -167,7 +167,7 @@ def test_a_missing_required_heading_stops_the_file(utility, missing) -> None:
 
 def test_a_heading_that_stands_twice_stops_the_file(utility) -> None:
     """Which of two rated_kva columns would be meant is anybody's guess."""
-    with pytest.raises(IntakeError, match="'Rated kVA' stands twice"):
+    with pytest.raises(IntakeError, match="'rated_kva' stands twice in line 1"):
         utility.take("units", "unit_id,rated_kva,Rated kVA\nT-1,25,50\n")
 
 

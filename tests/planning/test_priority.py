@@ -141,7 +141,8 @@ def test_thin_data_is_ranked_apart(utility, hourly_csv) -> None:
     assess(utility.database)
     listed = priority_list(utility.database)
     assert listed["unit_id"].tolist() == ["FULL", "THIN"]
-    assert listed["reasons"][1].startswith("ranked apart: data cover only 21 % of the period; hot")
+    said = "ranked apart: only 20 % of its energy is measured; hot"
+    assert listed["reasons"][1].startswith(said)
 
 
 def test_the_list_needs_an_assessment(utility) -> None:

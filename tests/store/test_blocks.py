@@ -102,4 +102,4 @@ def test_a_block_holds_the_whole_month(month, step_min, n) -> None:
 
 def test_quality_flags_are_bits_of_a_byte() -> None:
     """Flags are or-ed over the meters of a site, so each needs a bit of its own."""
-    assert [int(flag) for flag in Quality] == [1, 2, 4]
+    assert [int(flag) for flag in Quality] == [1, 2, 4, 8, 16, 32, 64]

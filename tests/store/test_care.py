@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 
 from tracker.store.care import store_info
+from tracker.store.schema import HEAD
 
 UNITS = "unit_id,rated_kva,site_id\nT-1,25,S-1\nT-2,50,S-2\n"
 CONNECTIONS = "meter_id,site_id\nM-1,S-1\nM-2,S-1\n"
@@ -96,7 +97,7 @@ def test_info_counts_what_is_held(filled) -> None:
     assert facts["store"] == filled.url
     assert facts["size_mb"] == round((filled.folder / "tracker.db").stat().st_size / 1e6, 1)
     wanted = {
-        "revision": "0001",
+        "revision": HEAD,
         "units": 2,
         "sites": 2,
         "meters": 2,

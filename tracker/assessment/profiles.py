@@ -1,7 +1,8 @@
 """From the store's blocks to the arrays that the thermal model runs on.
 
 Load belongs to the site and heat to the unit: a unit's load is that of the sites it stood at, while
-it stood there. Arrays begin with the period's first interval; NaN marks a gap.
+it stood there. Arrays begin with the period's first interval; NaN marks a gap. Short gaps in air
+temperatures are bridged by a straight line here; what is filled in loads was filled at intake.
 """
 
 from __future__ import annotations
@@ -20,10 +21,12 @@ from sqlalchemy import Connection
 
 from tracker.errors import InputError
 from tracker.fleet.nameplate import thermal_parameters
+from tracker.settings import LONGEST_WEATHER_LINE_H
 from tracker.store import fleet
 from tracker.store import readings as held_readings
 from tracker.store.blocks import (
     Blocks,
+    FlagArray,
     Float32Array,
     month_of,
     month_start_s,
@@ -31,6 +34,7 @@ from tracker.store.blocks import (
 )
 from tracker.store.fleet import Span, Stay
 from tracker.store.keys import in_parts
+from tracker.store.measured import ALL_MEASURED, MeasuredBlock, measured_blocks
 from tracker.thermal.parameters import ThermalParameters
 
 #: Units whose profiles are held in memory at a time.
@@ -95,7 +99,10 @@ class Profiles:
     expected_h: NDArray[np.float64]  #: hours of the period that each unit stood somewhere
     parameters: ThermalParameters
     load_kva: Float32Array  #: shape (n_unit, n_time)
+    measured_rows: NDArray[np.intp]  #: units of whose load a part was not measured
+    measured_share: NDArray[np.uint8]  #: of that load, shape (len(measured_rows), n_time) [1/200]
     air_temp_c: Float32Array  #: shape (n_station, n_time)
+    air_filled: NDArray[np.bool_]  #: where a line bridges a gap, shape (n_station, n_time)
     station_index: NDArray[np.int64]
     step_min: int
     start_s: int
@@ -110,6 +117,11 @@ class Fingerprint:
     def add_blocks(self, blocks: Blocks) -> None:
         """Take blocks in, by the checksums in their headers."""
         self._digest.update(blocks.headers)
+
+    def add_measured(self, blocks: Sequence[MeasuredBlock]) -> None:
+        """Take measured shares in."""
+        for block in blocks:
+            self._digest.update(block.share.tobytes())
 
     def add_text(self, text: str) -> None:
         """Take a nameplate or a placement in."""
@@ -255,8 +267,10 @@ def _batch(
 ) -> Iterator[Callable[[], Profiles]]:
     sites = sorted({stay.site_key for unit in units for stay in plan.stays.get(unit["id"], ())})
     blocks = held_readings.site_load_blocks(connection, sites, plan.period.months)
+    measured = measured_blocks(connection, sites, plan.period.months)
     fingerprint.add_blocks(blocks)
-    site_step = _steps(blocks)
+    fingerprint.add_measured(measured)
+    site_step = steps_of(blocks)
     by_step: dict[int, list[Mapping[str, Any]]] = {}
     for unit in units:
         stays = plan.stays.get(unit["id"], ())
@@ -264,13 +278,14 @@ def _batch(
         steps += [weather.step_of(plan.station_of_site[stay.site_key]) for stay in stays]
         by_step.setdefault(math.gcd(*steps) or 60, []).append(unit)
     for step_min, members in sorted(by_step.items()):
-        yield partial(_profiles, plan, members, blocks, weather, step_min)
+        yield partial(_profiles, plan, members, blocks, measured, weather, step_min)
 
 
 def _profiles(
     plan: FleetPlan,
     units: Sequence[Mapping[str, Any]],
     blocks: Blocks,
+    measured: Sequence[MeasuredBlock],
     weather: _Weather,
     step_min: int,
 ) -> Profiles:
@@ -286,14 +301,16 @@ def _profiles(
     pieced = [row for row, site in enumerate(site_of_row) if site is None and stays[row]]
     for row in pieced:
         _piece_together(load[row], stays[row], blocks, plan.period, step_min)
-    air, station_index = weather.of_units(plan, stays, step_min)
+    air, filled, station_index = weather.of_units(plan, stays, step_min)
     return Profiles(
         [unit["id"] for unit in units],
         [own[-1].site_key if own else None for own in stays],
         np.array([_hours(own, plan.period) for own in stays]),
         thermal_parameters(fleet.nameplate(unit) for unit in units),
         load,
+        *_measured_share(stays, measured, plan.period, step_min),
         air,
+        filled,
         station_index,
         step_min,
         plan.period.start_s,
@@ -322,7 +339,7 @@ def _hours(stays: Sequence[Stay], period: Period) -> float:
     return sum(end_s - start_s for start_s, end_s in parts) / 3600
 
 
-def _steps(blocks: Blocks) -> dict[int, int]:
+def steps_of(blocks: Blocks) -> dict[int, int]:
     """Return the finest step of each key [min]: {key: step}."""
     if not len(blocks):
         return {}
@@ -331,15 +348,34 @@ def _steps(blocks: Blocks) -> dict[int, int]:
     return dict(zip(keys.tolist(), steps.tolist(), strict=True))
 
 
+def unpacked_rows(
+    blocks: Blocks, keys: Sequence[int], period: Period, step_min: int
+) -> Float32Array:
+    """Return the values of some series or sites over a period, one row a key.
+
+    Returns
+    -------
+    values : float32, shape (len(keys), n_time)
+        NaN where nothing is held. `step_min` must divide the step of every block.
+    """
+    room = np.empty((len(keys), _n_time(period, step_min)), dtype=np.float32)
+    _fill(room, blocks, {key: row for row, key in enumerate(keys)}, period, step_min)
+    return room
+
+
 def _fill(
-    room: Float32Array,
+    room: Float32Array | FlagArray,
     blocks: Blocks,
     row_of: Mapping[int, int],
     period: Period,
     step_min: int,
 ) -> None:
-    """Unpack blocks into the rows that `row_of` gives their keys, NaN where there is none."""
+    """Unpack blocks into the rows that `row_of` gives their keys.
+
+    A room of floats takes the values, NaN where there is none; a room of bytes the flags, else 0.
+    """
     step_s = 60 * step_min
+    flags = int(room.dtype == np.uint8)
     rows = np.array([row_of.get(key, -1) for key in blocks.key.tolist()], dtype=np.intp)
     n_filled = np.bincount(
         blocks.month[rows >= 0] - period.months[0],
@@ -348,12 +384,12 @@ def _fill(
     for month, n_row in enumerate(n_filled.tolist(), start=period.months[0]):
         if n_row < len(room):
             start, stop, _ = _places(month, period, step_s, room.shape[1])
-            room[:, start:stop] = np.nan
+            room[:, start:stop] = 0 if flags else np.nan
     for month, own_step_min, places in blocks.of_equal_length():
         chosen = places[rows[places] >= 0]
         if not len(chosen):
             continue
-        values, _ = unpack([blocks.payload[place] for place in chosen.tolist()])
+        values: NDArray[Any] = unpack([blocks.payload[place] for place in chosen.tolist()])[flags]
         times = own_step_min // step_min
         if times > 1:
             values = np.repeat(values, times, axis=1)
@@ -369,81 +405,176 @@ def _places(month: int, period: Period, step_s: int, n_time: int) -> tuple[int, 
 
 
 def _piece_together(
-    load: Float32Array,
+    load: Float32Array | FlagArray,
     stays: Sequence[Stay],
     blocks: Blocks,
     period: Period,
     step_min: int,
 ) -> None:
     """Put the load of each site where the unit stood there."""
-    step_s = 60 * step_min
     for stay in stays:
-        whole = np.empty((1, len(load)), dtype=np.float32)
+        whole = np.empty((1, len(load)), dtype=load.dtype)
         _fill(whole, blocks, {stay.site_key: 0}, period, step_min)
-        start_s, end_s = _part_of(stay.span, period)
-        part = slice(
-            -(-(start_s - period.start_s) // step_s), -(-(end_s - period.start_s) // step_s)
-        )
+        part = _places_of(stay, period, step_min)
         load[part] = whole[0, part]
+
+
+def _places_of(stay: Stay, period: Period, step_min: int) -> slice:
+    """Return the places of a period that a stay covers."""
+    start_s, end_s = _part_of(stay.span, period)
+    step_s = 60 * step_min
+    return slice(-(-(start_s - period.start_s) // step_s), -(-(end_s - period.start_s) // step_s))
+
+
+def _measured_share(
+    stays: Sequence[Sequence[Stay]],
+    measured: Sequence[MeasuredBlock],
+    period: Period,
+    step_min: int,
+) -> tuple[NDArray[np.intp], NDArray[np.uint8]]:
+    """Return the units of whose load a part was not measured, and how much was, place by place."""
+    of_site: dict[int, list[MeasuredBlock]] = {}
+    for block in measured:
+        of_site.setdefault(block.site_key, []).append(block)
+    rows = [row for row, own in enumerate(stays) if any(stay.site_key in of_site for stay in own)]
+    n_time = _n_time(period, step_min)
+    share = np.full((len(rows), n_time), ALL_MEASURED, dtype=np.uint8)
+    for place, row in enumerate(rows):
+        for stay in stays[row]:
+            stood = _places_of(stay, period, step_min)
+            for block in of_site.get(stay.site_key, ()):
+                times = block.step_min // step_min
+                own = np.repeat(block.share, times) if times > 1 else block.share
+                start, stop, first = _places(block.month, period, 60 * step_min, n_time)
+                start, stop = max(start, stood.start), min(stop, stood.stop)
+                if start < stop:
+                    share[place, start:stop] = own[start - first : stop - first]
+    return np.array(rows, dtype=np.intp), share
+
+
+def load_flags(connection: Connection, plan: FleetPlan, step_min: int) -> FlagArray:
+    """Return what is known of the loads of a plan's units beyond their size.
+
+    Returns
+    -------
+    flags : uint8, shape (n_unit, n_time)
+        See `Quality`; 0 where no load is held.
+    """
+    flags = np.zeros((len(plan.units), _n_time(plan.period, step_min)), dtype=np.uint8)
+    stays = [plan.stays.get(unit["id"], ()) for unit in plan.units]
+    sites = sorted({stay.site_key for own in stays for stay in own})
+    blocks = held_readings.site_load_blocks(connection, sites, plan.period.months)
+    for row, own in enumerate(stays):
+        _piece_together(flags[row], own, blocks, plan.period, step_min)
+    return flags
 
 
 class _Weather:
     """Air temperatures of all stations of a plan, at any step."""
 
     def __init__(self, connection: Connection, plan: FleetPlan, fingerprint: Fingerprint) -> None:
+        # A gap at an edge of the period is bridged from the readings beyond it.
+        margin_s = 3600 * (math.ceil(LONGEST_WEATHER_LINE_H) + 1)
+        self._period = plan.period
+        self._looked_at = Period(plan.period.start_s - margin_s, plan.period.end_s + margin_s)
         self._blocks = held_readings.series_blocks(
-            connection, plan.stations, WEATHER, plan.period.months
+            connection, plan.stations, WEATHER, self._looked_at.months
         )
         fingerprint.add_blocks(self._blocks)
         self._row_of = {station: row for row, station in enumerate(plan.stations)}
-        self._period = plan.period
-        self._steps = _steps(self._blocks)
-        self._made: dict[int, Float32Array] = {}
+        self._steps = steps_of(self._blocks)
+        self._made: dict[int, tuple[Float32Array, NDArray[np.bool_]]] = {}
 
     def step_of(self, station: int | None) -> int:
         """Return the step of a station [min]; 0 where nothing is known of it."""
         return 0 if station is None else self._steps.get(station, 0)
 
-    def _air(self, step_min: int) -> Float32Array:
-        """Return all stations at a step, and a last row without any temperature."""
+    def _air(self, step_min: int) -> tuple[Float32Array, NDArray[np.bool_]]:
+        """Return all stations at a step, where they are bridged, and a last row without any."""
         if step_min not in self._made:
             shape = (len(self._row_of) + 1, _n_time(self._period, step_min))
             air = np.full(shape, np.nan, dtype=np.float32)
-            usable = {
-                station: row
-                for station, row in self._row_of.items()
-                if self.step_of(station) % step_min == 0
-            }
-            _fill(air, self._blocks, usable, self._period, step_min)
-            self._made[step_min] = air
+            filled = np.zeros(shape, dtype=np.bool_)
+            for own_step_min in set(self._steps.values()):
+                if own_step_min % step_min == 0:
+                    stations = [key for key, step in self._steps.items() if step == own_step_min]
+                    rows = [self._row_of[station] for station in stations]
+                    air[rows], filled[rows] = self._bridged(stations, own_step_min, step_min)
+            self._made[step_min] = air, filled
         return self._made[step_min]
+
+    def _bridged(
+        self, stations: Sequence[int], own_step_min: int, step_min: int
+    ) -> tuple[Float32Array, NDArray[np.bool_]]:
+        """Return stations of one step, at a finer one; the line is drawn at their own."""
+        known = np.empty((len(stations), _n_time(self._looked_at, own_step_min)), dtype=np.float32)
+        rows = {station: row for row, station in enumerate(stations)}
+        _fill(known, self._blocks, rows, self._looked_at, own_step_min)
+        air = np.stack([bridged(row, _longest_gap(own_step_min)) for row in known])
+        first = (self._period.start_s - self._looked_at.start_s) // (60 * step_min)
+        part = slice(first, first + _n_time(self._period, step_min))
+        times = own_step_min // step_min
+        filled = np.isfinite(air) & np.isnan(known)
+        return np.repeat(air, times, axis=1)[:, part], np.repeat(filled, times, axis=1)[:, part]
 
     def of_units(
         self, plan: FleetPlan, stays: Sequence[Sequence[Stay]], step_min: int
-    ) -> tuple[Float32Array, NDArray[np.int64]]:
-        """Return air temperatures, and the row of each unit."""
-        air = self._air(step_min)
+    ) -> tuple[Float32Array, NDArray[np.bool_], NDArray[np.int64]]:
+        """Return air temperatures, where they are bridged, and the row of each unit."""
+        air, filled = self._air(step_min)
         nowhere = len(self._row_of)
         index = np.full(len(stays), nowhere, dtype=np.int64)
-        own_air: list[Float32Array] = []
+        moved: list[tuple[Sequence[Stay], Sequence[int]]] = []
         for row, own in enumerate(stays):
             stations = [plan.station_of_site[stay.site_key] for stay in own]
             rows = [nowhere if each is None else self._row_of[each] for each in stations]
             if len(set(rows)) == 1:
                 index[row] = rows[0]
             elif rows:  # the unit moved from one station's weather into another's
-                index[row] = len(air) + len(own_air)
-                own_air.append(self._pieced(air, own, rows, step_min))
-        return np.vstack([air, *own_air]) if own_air else air, index
+                index[row] = len(air) + len(moved)
+                moved.append((own, rows))
+        if moved:
+            air = np.vstack([air, *(self._pieced(air, *each, step_min) for each in moved)])
+            filled = np.vstack([filled, *(self._pieced(filled, *each, step_min) for each in moved)])
+        return air, filled, index
 
     def _pieced(
-        self, air: Float32Array, stays: Sequence[Stay], rows: Sequence[int], step_min: int
-    ) -> Float32Array:
-        pieced = np.full(air.shape[1], np.nan, dtype=np.float32)
+        self, of_stations: NDArray[Any], stays: Sequence[Stay], rows: Sequence[int], step_min: int
+    ) -> NDArray[Any]:
+        """Return the last row, of nothing known, with the part of each stay's station in it."""
+        pieced: NDArray[Any] = of_stations[len(self._row_of)].copy()
         for stay, row in zip(stays, rows, strict=True):
-            start_s, end_s = _part_of(stay.span, self._period)
-            start, stop = (
-                -(-(s - self._period.start_s) // (60 * step_min)) for s in (start_s, end_s)
-            )
-            pieced[start:stop] = air[row, start:stop]
+            part = _places_of(stay, self._period, step_min)
+            pieced[part] = of_stations[row, part]
         return pieced
+
+
+def _longest_gap(step_min: int) -> int:
+    return int(60 * LONGEST_WEATHER_LINE_H) // step_min
+
+
+def bridged(values: Float32Array, longest: int) -> Float32Array:
+    """Return a series whose short gaps are filled by a straight line between their neighbours.
+
+    Parameters
+    ----------
+    values : float32, shape (n_time,)
+        NaN marks a gap.
+    longest : int
+        Places that a gap may have to be filled; a longer one, and one at an end, stays a gap.
+
+    Examples
+    --------
+    >>> series = np.array([20, np.nan, np.nan, 26, np.nan, np.nan, np.nan, 20, np.nan], np.float32)
+    >>> bridged(series, 2).tolist()
+    [20.0, 22.0, 24.0, 26.0, nan, nan, nan, 20.0, nan]
+    """
+    known = np.flatnonzero(np.isfinite(values))
+    gap = np.diff(known) - 1
+    filled = values.copy()
+    for before, length in zip(known[:-1][gap > 0].tolist(), gap[gap > 0].tolist(), strict=True):
+        if length <= longest:
+            after = before + length + 1
+            line = np.linspace(values[before], values[after], length + 2)
+            filled[before + 1 : after] = line[1:-1]
+    return filled

@@ -10,7 +10,9 @@ from dataclasses import asdict, dataclass, replace
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
+from tracker.assessment.coverage import measured_energy_share
 from tracker.assessment.profiles import (
     Fingerprint,
     Period,
@@ -133,6 +135,9 @@ def assess(
 
 Assessed = tuple[Profiles, FleetFigures]
 
+#: Digits that coverage is kept to [%]: 160/200 of every value is 80 %, whatever a sum makes of it.
+COVERAGE_DECIMALS = 9
+
 #: Batches under way at a time: one read, one unpacked, one in the kernel.
 BATCHES_UNDER_WAY = 3
 
@@ -172,9 +177,6 @@ def _rows(
     """Turn figures into rows of the results table."""
     counted_h = figures.counted_hours
     known = counted_h > 0
-    expected_h = np.maximum(batch.expected_h - WARM_UP_H, 0.0)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        coverage_pct = np.where(expected_h > 0, 100.0 * counted_h / expected_h, 0.0)
     step_s = 60 * batch.step_min
     columns: dict[str, Any] = {
         "peak_load_pct": 100.0 * figures.peak_load_pu,
@@ -190,7 +192,7 @@ def _rows(
             known, loss_of_life_pct(figures.aging_hours, settings.life_h), np.nan
         ),
         "counted_hours": counted_h,
-        "coverage_pct": coverage_pct,
+        "coverage_pct": _coverage_pct(batch, counted_h),
         "end_top_oil_rise_k": figures.state.top_oil_rise_k,
         "end_hot_spot_gradient_k": figures.state.hot_spot_gradient_k,
         "end_last_load_pu": figures.state.last_load_pu,
@@ -209,6 +211,26 @@ def _rows(
             "peak_hot_spot_at": dt.datetime.fromtimestamp(peak_at, dt.UTC) if index >= 0 else None,
             **dict(zip(columns, values, strict=True)),
         }
+
+
+def _coverage_pct(batch: Profiles, counted_h: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return the measured share of each unit's energy over the hours it stood somewhere [%].
+
+    What is missing altogether is taken for as large as what counts.
+    """
+    expected_h = np.maximum(batch.expected_h - WARM_UP_H, 0.0)
+    covered = np.divide(counted_h, expected_h, out=np.zeros_like(counted_h), where=expected_h > 0)
+    rows = batch.measured_rows
+    if len(rows):
+        covered[rows] *= measured_energy_share(
+            batch.load_kva,
+            batch.air_temp_c,
+            batch.station_index,
+            rows,
+            batch.measured_share,
+            batch.step_min / 60,
+        )
+    return np.round(100.0 * covered, COVERAGE_DECIMALS)
 
 
 def _or_none(values: Any) -> list[float | None]:

@@ -9,11 +9,18 @@ import numpy as np
 from numpy.typing import NDArray
 from sqlalchemy import Connection
 
-from tracker.assessment.profiles import Period, chosen_period, fleet_plan, profiles
+from tracker.assessment.profiles import (
+    Period,
+    chosen_period,
+    fleet_plan,
+    load_flags,
+    profiles,
+)
 from tracker.errors import InputError
 from tracker.settings import AssessmentSettings
 from tracker.store.engine import Database
 from tracker.store.fleet import unit_record
+from tracker.store.measured import ALL_MEASURED
 from tracker.store.results import AssessmentRow, latest_assessment
 from tracker.thermal.kernel import trace_fleet
 
@@ -30,6 +37,9 @@ class UnitTrace:
     hot_spot_c: NDArray[np.float64]  #: at the end of the interval
     aging_factor: NDArray[np.float64]  #: mean over the interval
     counted: NDArray[np.bool_]  #: whether the interval counts in the unit's figures
+    load_flags: NDArray[np.uint8]  #: what is known of the load beyond its size, see `Quality`
+    measured_share: NDArray[np.float64]  #: of the load, 0 to 1
+    air_filled: NDArray[np.bool_]  #: whether a straight line bridges the air temperature
 
 
 def unit_trace(
@@ -66,6 +76,7 @@ def unit_trace(
         period = _run_period(connection, latest, starts_at, ends_at)
         plan = fleet_plan(connection, period, {record.unit_id})
         (batch,) = profiles(connection, plan)
+        flags = load_flags(connection, plan, batch.step_min)[0]
     trace = trace_fleet(
         batch.load_kva,
         batch.air_temp_c,
@@ -75,6 +86,8 @@ def unit_trace(
         time_constant=settings.time_constant,
     )
     air = batch.air_temp_c[batch.station_index].astype(np.float64)
+    measured = batch.measured_share[0] if len(batch.measured_rows) else np.uint8(ALL_MEASURED)
+    share = np.broadcast_to(measured / ALL_MEASURED, air.shape[1:])
     start_s = batch.start_s + 60 * batch.step_min * np.arange(air.shape[1], dtype=np.int64)
     shown = np.ones(len(start_s), dtype=np.bool_)
     if starts_at is not None:
@@ -95,6 +108,9 @@ def unit_trace(
         trace.hot_spot_c[0, shown],
         trace.aging_factor[0, shown],
         trace.counted[0, shown],
+        flags[shown],
+        share[shown],
+        batch.air_filled[batch.station_index[0], shown],
     )
 
 

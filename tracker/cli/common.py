@@ -139,13 +139,25 @@ def print_table(out: Console, columns: Sequence[str], rows: Sequence[Mapping[str
 @contextmanager
 def progress(title: str) -> Iterator[Callable[[str, float], None]]:
     """Show a bar on a terminal; give a function to call with what is being done and its share."""
-    from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
+    from rich.progress import (
+        BarColumn,
+        Progress,
+        TextColumn,
+        TimeElapsedColumn,
+        TimeRemainingColumn,
+    )
 
     out = console(stderr=True)
     if not out.is_terminal:
         yield lambda _what, _share: None
         return
-    columns = (TextColumn("{task.description}"), BarColumn(), TimeElapsedColumn())
+    columns = (
+        TextColumn("{task.description}"),
+        BarColumn(),
+        TimeElapsedColumn(),
+        TextColumn("left:"),
+        TimeRemainingColumn(),
+    )
     with Progress(*columns, console=out, transient=True) as bar:
         task = bar.add_task(title, total=1.0)
         yield lambda what, share: bar.update(task, description=what, completed=share)

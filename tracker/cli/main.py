@@ -9,7 +9,7 @@ from typing import Annotated, Any
 
 import typer
 
-from tracker.cli import imports, stores
+from tracker.cli import doubtful, imports, stores
 from tracker.cli.common import (
     FromOption,
     JsonOption,
@@ -165,6 +165,7 @@ def rank(
     json_: JsonOption = False,
 ) -> None:
     """Print the hot-spot ranking, hottest first unless --by says otherwise."""
+    from tracker.planning.standing import why_apart
     from tracker.store import results
 
     direction = "asc" if by in results.TEXT_COLUMNS else "desc"
@@ -179,10 +180,16 @@ def rank(
         page = results.ranking_page(
             connection, assessment.key, stop=top, sort=[(by, direction)], filters=filters
         )
-    rows = [{"rank": place, **row} for place, row in enumerate(page.rows, start=1)]
+    rows: list[dict[str, Any]] = []
+    for place, row in enumerate(page.rows, start=1):
+        apart = why_apart(row)
+        del row["standing"]
+        rows.append({"rank": place, **row, "apart": apart})
 
     def plain(out: Any) -> None:
         columns = RANK_COLUMNS if by in RANK_COLUMNS else (*RANK_COLUMNS, by)
+        if any(row["apart"] for row in rows):
+            columns = (*columns, "apart")
         print_table(out, ("rank", *columns), rows)
         out.print(
             f"\n{len(rows)} of {page.total} units, {assessment.starts_at:%Y-%m-%d} to "
@@ -191,6 +198,9 @@ def rank(
         )
 
     answer(rows, as_json=json_, plain=plain)
+
+
+app.command()(doubtful.doubtful)
 
 
 @app.command()

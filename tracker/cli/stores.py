@@ -8,9 +8,10 @@ from typing import Annotated, Any
 import typer
 
 from tracker.cli.common import DEFAULT_STORE, JsonOption, StoreOption, answer, opened, print_table
+from tracker.errors import InputError
 
 app = typer.Typer(
-    help="Look after the store: info, check, backup, upgrade.",
+    help="Look after the store: info, check, rules, backup, upgrade.",
     no_args_is_help=True,
     rich_markup_mode=None,
 )
@@ -24,11 +25,16 @@ def upgrade(store: StoreOption = None, json_: JsonOption = False) -> None:
 
     database = Database(store or DEFAULT_STORE)
     before, after = upgrade_store(database)
-    text = (
-        f"{database.shown_url} is at revision {after} already."
-        if before == after
-        else f"{database.shown_url}: revision {before or 'none'} → {after}."
-    )
+    text = f"{database.shown_url} is at revision {after} already."
+    if before != after:
+        from tracker.intake.site_load import derive_all
+
+        with database.writing() as connection:
+            n_derived = derive_all(connection).n_site_months
+        text = (
+            f"{database.shown_url}: revision {before or 'none'} → {after}; "
+            f"{n_derived:,} site-months of load derived anew. Assess again."
+        )
     database.close()
     answer(
         {"before": before, "after": after},
@@ -82,3 +88,55 @@ def check(store: StoreOption = None, json_: JsonOption = False) -> int:
 
     answer({"sound": not problems, "problems": problems}, as_json=json_, plain=plain)
     return 1 if problems else 0
+
+
+@app.command()
+def rules(
+    change: Annotated[
+        list[str] | None,
+        typer.Option(
+            "--set",
+            metavar="NAME=VALUE",
+            help="Change a rule, 0 switches it off; NAME=default sets it back. May be given several times.",
+        ),
+    ] = None,
+    store: StoreOption = None,
+    json_: JsonOption = False,
+) -> None:
+    """Show the rules of validation and filling, or change them; loads are then derived anew."""
+    from dataclasses import asdict
+
+    from tracker.settings import ReadingRules
+    from tracker.store.rules import reading_rules
+
+    with opened(store) as database:
+        if change:
+            from tracker.intake.rules import set_rules
+
+            values = dict(_assignment(text) for text in change)
+            with database.writing() as connection:
+                set_rules(connection, values)
+        with database.reading() as connection:
+            in_force = asdict(reading_rules(connection))
+    defaults = asdict(ReadingRules())
+    rows = [
+        {"rule": name, "value": value, "default": defaults[name]}
+        for name, value in in_force.items()
+    ]
+    answer(
+        in_force,
+        as_json=json_,
+        plain=lambda out: print_table(out, ("rule", "value", "default"), rows),
+    )
+
+
+def _assignment(text: str) -> tuple[str, float | None]:
+    name, _, value = text.partition("=")
+    if value.strip() == "default":
+        return name.strip(), None
+    try:
+        return name.strip(), float(value)
+    except ValueError as error:
+        raise InputError(
+            f"--set {text!r} sets nothing; allowed: NAME=NUMBER, as stuck_h=48, or NAME=default."
+        ) from error

@@ -2,19 +2,23 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from functools import partial
 from pathlib import Path
 
 import dash_mantine_components as dmc
 from dash import Dash, get_relative_path, html, page_container
 from flask import Response
+from pandas import DataFrame
 
-from tracker.dashboard.pages import missing, ranking, unit
+from tracker.dashboard.pages import doubtful, missing, ranking, unit
 from tracker.errors import TrackerError
+from tracker.planning.doubtful import doubtful_connections, doubts_table
 from tracker.planning.priority import priority_list
 from tracker.reports.tables import csv_text
 from tracker.store.engine import Database
 
-PAGES = (ranking, unit, missing)
+PAGES = (ranking, unit, doubtful, missing)
 CONTENT_SECURITY_POLICY = (
     "default-src 'self'; style-src 'self' 'unsafe-inline'; img-src 'self' data: blob:; "
     "font-src 'self' data:; object-src 'none'; base-uri 'self'; form-action 'self'; "
@@ -79,19 +83,26 @@ def _shell() -> dmc.MantineProvider:
 
 
 def _add_export(app: Dash, database: Database) -> None:
-    def _priority_list() -> Response:
+    """Let tables be fetched as the files that the commands write."""
+    tables: dict[str, Callable[[], DataFrame]] = {
+        "priority_list": lambda: priority_list(database),
+        "doubtful_connections": lambda: doubts_table(doubtful_connections(database)),
+    }
+
+    def _table(name: str) -> Response:
         try:
-            text = csv_text(priority_list(database))
+            text = csv_text(tables[name]())
         except TrackerError as error:
             return Response(f"{error}\n", status=409, mimetype="text/plain")
         return Response(
             text,
             mimetype="text/csv",
-            headers={"Content-Disposition": 'attachment; filename="priority_list.csv"'},
+            headers={"Content-Disposition": f'attachment; filename="{name}.csv"'},
         )
 
-    address = f"{app.config.requests_pathname_prefix}export/priority_list.csv"
-    app.server.add_url_rule(address, "priority_list", _priority_list)
+    for name in tables:
+        address = f"{app.config.requests_pathname_prefix}export/{name}.csv"
+        app.server.add_url_rule(address, name, partial(_table, name))
 
 
 def _add_security_headers(app: Dash) -> None:

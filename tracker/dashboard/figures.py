@@ -11,7 +11,8 @@ from numpy.typing import NDArray
 
 from tracker.assessment.daily import DAY_S, aging_by_day, life_used_by_day
 from tracker.assessment.trace import UnitTrace
-from tracker.dashboard.words import HIGHEST_HOT_SPOT_C, TOP_OIL_LIMIT_C
+from tracker.dashboard.words import HIGHEST_HOT_SPOT_C, LOAD_ORIGINS, TOP_OIL_LIMIT_C
+from tracker.store.blocks import Quality
 
 #: Points a line is drawn with at most, a year of quarter hours and some; of more, the lowest and the
 #: highest of each stretch are kept.
@@ -48,6 +49,9 @@ PANELS = (
     Panel("Life used, %", (0.0, 0.125)),
 )
 FIGURE_HEIGHT = 980
+
+#: Share of the height that a lane takes below the load, and what stands between load and lanes.
+LANE_HEIGHT, LANE_GAP = 0.0165, 0.012
 
 
 @dataclass(frozen=True, slots=True)
@@ -138,7 +142,8 @@ def unit_figure(
         *((2, line, "°C") for line in limit_lines(trace, limits)[0]),
         (3, Line(1.0, "normal aging", INK, "dot"), ""),
     ]
-    figure = go.Figure([*_interval_lines(trace), *_days(trace, limits)])
+    lanes = lanes_of(trace)
+    figure = go.Figure([*_interval_lines(trace), *_days(trace, limits), *_lane_marks(trace, lanes)])
     figure.update_layout(
         template="plotly_white",
         height=FIGURE_HEIGHT,
@@ -155,10 +160,94 @@ def unit_figure(
         annotations=[
             *(_line_words(*each) for each in lines),
             *(_panel_words(panel) for panel in PANELS),
+            *(_lane_words(trace, number, flag) for number, flag in enumerate(lanes)),
         ],
     )
     figure.update_layout({f"yaxis{_axis(row)}": _value_axis(row) for row in (1, 2, 3, 4)})
+    if lanes:
+        bottom, top = PANELS[0].domain
+        lanes_top = bottom + LANE_HEIGHT * len(lanes)
+        figure.update_layout(
+            yaxis={"domain": (lanes_top + LANE_GAP, top)},
+            yaxis5={
+                "domain": (bottom, lanes_top),
+                "range": [len(lanes) - 0.5, -0.5],
+                "visible": False,
+                "fixedrange": True,
+            },
+        )
     return figure
+
+
+def lanes_of(trace: UnitTrace) -> list[Quality]:
+    """Return how parts of the load came about: those of `LOAD_ORIGINS` that occur, a lane each."""
+    return [flag for flag in LOAD_ORIGINS if _came_so(trace, flag).any()]
+
+
+def hours_of(trace: UnitTrace, flag: Quality) -> float:
+    """Return in how many hours some of the load came about in a way [h]."""
+    return float(np.count_nonzero(_came_so(trace, flag)) * trace.step_h)
+
+
+def _came_so(trace: UnitTrace, flag: Quality) -> NDArray[np.bool_]:
+    """Say where the load came about in a way; what we spread is no estimate of the utility's."""
+    came: NDArray[np.bool_] = (trace.load_flags & flag) != 0
+    if flag == Quality.ESTIMATED:
+        came &= (trace.load_flags & Quality.SPREAD) == 0
+    return came
+
+
+def _lane_marks(trace: UnitTrace, lanes: list[Quality]) -> list[go.Scatter]:
+    """Mark where the load came about otherwise, a lane a way: its place tells which, not a colour.
+
+    A stretch too short to be seen at the figure's width still has a stroke at its beginning.
+    """
+    step_s = round(3600 * trace.step_h)
+    marks = []
+    for number, flag in enumerate(lanes):
+        line = number + 0.4  # below the lane's words, as long as they may be on a narrow screen
+        first, after = _stretches(_came_so(trace, flag))
+        ends = trace.interval_start_s[after - 1] + step_s
+        # From its beginning to its end, and a gap to the next.
+        moments = np.stack([trace.interval_start_s[first], ends, ends], axis=1)
+        marks.append(
+            go.Scatter(
+                x=_moments(moments.ravel()),
+                y=np.tile(np.array([line, line, np.nan], dtype=np.float32), len(first)),
+                yaxis="y5",
+                name=LOAD_ORIGINS[flag],
+                mode="lines+markers",
+                line={"color": FAINT, "width": 3},
+                marker={
+                    "symbol": np.tile(["line-ns", "circle", "circle"], len(first)),
+                    "size": np.tile([6, 0, 0], len(first)),
+                    "line": {"color": FAINT, "width": 1},
+                },
+                hoverinfo="skip",
+            )
+        )
+    return marks
+
+
+def _lane_words(trace: UnitTrace, number: int, flag: Quality) -> dict[str, object]:
+    return {
+        "text": f"{LOAD_ORIGINS[flag]}, {hours_of(trace, flag):,.4g} h",
+        "xref": "x domain",
+        "yref": "y5",
+        "x": 0.004,
+        "y": number,
+        "xanchor": "left",
+        "yanchor": "middle",
+        "showarrow": False,
+        "yshift": 1,
+        "font": {"size": 10, "color": INK},
+    }
+
+
+def _stretches(on: NDArray[np.bool_]) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
+    """Return where each run begins, and the place after its end."""
+    edges = np.flatnonzero(np.diff(np.concatenate([[False], on, [False]]).astype(np.int8)))
+    return edges[::2], edges[1::2]
 
 
 def _time_axis(span: tuple[dt.datetime, dt.datetime]) -> dict[str, object]:
@@ -249,10 +338,9 @@ def _days(trace: UnitTrace, limits: Limits) -> tuple[go.Bar, go.Scatter]:
 def _warm_ups(trace: UnitTrace) -> list[dict[str, object]]:
     """Shade what is known and counts in no figure."""
     uncounted = ~trace.counted & np.isfinite(trace.hot_spot_c)
-    edges = np.flatnonzero(np.diff(np.concatenate([[False], uncounted, [False]])))
     step_s = round(3600 * trace.step_h)
     shapes: list[dict[str, object]] = []
-    for first, last in edges.reshape(-1, 2):
+    for first, last in zip(*_stretches(uncounted), strict=True):
         x0, x1 = _moments(trace.interval_start_s[[first, last - 1]] + np.array([0, step_s]))
         shapes += [
             {

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable
 from pathlib import PurePath
 from typing import Any, TypeAlias
+from urllib.parse import urlencode
 
 from dash import html
 from dash.development.base_component import Component
@@ -65,6 +66,11 @@ def staleness(files: int) -> Component | None:
         html.Code("tracker assess"),
         " brings them up to date.",
     )
+
+
+def unit_address(unit_id: str) -> str:
+    """Return the address of a unit's page, seen from another page."""
+    return f"unit?{urlencode({'unit_id': unit_id})}"
 
 
 def notice(*children: Child) -> html.Div:

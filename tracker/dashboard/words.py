@@ -8,6 +8,7 @@ from bisect import bisect_right
 from dataclasses import dataclass
 
 from tracker.fleet.nameplate import REFERENCE_HOT_SPOT_C
+from tracker.store.blocks import Quality
 
 #: What stands where there is no figure.
 NONE = "–"
@@ -21,6 +22,17 @@ TOP_OIL_LIMIT_C = 120.0
 
 #: Steps of the colour scale for hot spots [°C]; the style sheet has one shade more than these.
 HEAT_STEPS_C = (80.0, 95.0, 110.0, 125.0, 140.0, 170.0, 200.0)
+
+
+#: How a load came about where it was not plainly measured; a site's hour may be several of these.
+LOAD_ORIGINS = {
+    Quality.ESTIMATED: "estimated by the utility",
+    Quality.FILLED: "filled by a straight line",
+    Quality.LIKE_DAYS: "filled by like days",
+    Quality.SCALED: "scaled up for missing meters",
+    Quality.SPREAD: "spread from monthly energy",
+    Quality.DOUBTFUL: "doubtful but kept",
+}
 
 
 def decimals(value: float | None, digits: int) -> str:

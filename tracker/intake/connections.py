@@ -10,9 +10,10 @@ import pandas as pd
 from sqlalchemy import Connection
 
 from tracker.errors import IntakeError
+from tracker.intake.customer_classes import Classes
 from tracker.intake.register import Column, read_register
-from tracker.intake.report import Fates, FileReport, Finding
-from tracker.intake.site_load import derive_sites
+from tracker.intake.report import Fates, Finding, Findings, Outcome
+from tracker.intake.site_load import derive_after
 from tracker.intake.source import Source
 from tracker.intake.stays import NEW, StayBook, span_of
 from tracker.store import fleet
@@ -27,6 +28,8 @@ COLUMNS = (
     Column("starts_on", "date"),
     Column("ends_on", "date"),
     Column("multiplier", "number", above=0, high=1e6),
+    Column("power_factor", "number", above=0, high=1),
+    Column("class"),
 )
 
 
@@ -52,7 +55,7 @@ class _Places:
         return (at_the_time or stays)[-1].site_key
 
 
-def take_connections(connection: Connection, source: Source, zone: ZoneInfo | None) -> FileReport:
+def take_connections(connection: Connection, source: Source, zone: ZoneInfo | None) -> Outcome:
     """Take connections into the store, and derive the load of the sites they touch.
 
     Raises
@@ -65,26 +68,28 @@ def take_connections(connection: Connection, source: Source, zone: ZoneInfo | No
             f"{source.name}: heading unit_id or site_id is missing; found {', '.join(source.headings)}."
         )
     rows = read_register(source, COLUMNS)
-    frame = rows.frame
-    names = sorted(set(frame["meter_id"]))
+    names = sorted(set(rows.frame["meter_id"]))
     meters = held_readings.series_keys(connection, "meter", names)
     book = StayBook.of(fleet.connections(connection))
-    fates, findings = _decided(frame, zone, meters, _places(connection), book)
+    classes = Classes.of(connection, rows.frame, meters)
+    frame = rows.frame.drop(index=[finding.ordinal for finding in classes.findings])
+    fates, findings = _decided(frame, zone, meters, _places(connection), book, classes)
     fleet.remove_stays(connection, MeterConnection, [stay.key for stay in book.removed])
     fleet.add_connections(connection, book.added)
-    months = held_readings.months_of_series(
-        connection, sorted({stay.who for stay in [*book.added, *book.removed]})
+    former = classes.keep(connection, findings)
+    changed = [*book.added, *book.removed]
+    derived = derive_after(
+        connection,
+        sites={stay.site_key for stay in changed},
+        meters={*former, *(stay.who for stay in changed)},
+        classes=former.values(),
     )
-    by_meter: dict[int, set[int]] = {}
-    for stay in [*book.added, *book.removed]:
-        by_meter.setdefault(stay.who, set()).add(stay.site_key)
-    derive_sites(connection, {(site, month) for key, month in months for site in by_meter[key]})
-    return FileReport(
-        source.name,
-        "connections",
+    return Outcome(
         fates,
-        source.refusals([*rows.findings, *findings]),
+        Findings.of([*rows.findings, *classes.findings, *findings]),
         source.left_out([column.heading for column in COLUMNS]),
+        derived.notes(),
+        derived.as_facts(),
     )
 
 
@@ -102,15 +107,23 @@ def _decided(
     meters: Mapping[str, int],
     places: _Places,
     book: StayBook,
+    classes: Classes,
 ) -> tuple[Fates, list[Finding]]:
     """Put each row into the book, or say why not."""
     fates = Fates()
     findings: list[Finding] = []
     site_ids = {key: site_id for site_id, key in places.sites.items()}
-    columns = ["meter_id", "unit_id", "site_id", "starts_on", "ends_on", "multiplier"]
-    for ordinal, meter_id, unit_id, site_id, starts, ends, multiplier in frame[
-        columns
-    ].itertuples():
+    columns = [
+        "meter_id",
+        "unit_id",
+        "site_id",
+        "starts_on",
+        "ends_on",
+        "multiplier",
+        "power_factor",
+    ]
+    for row in frame[columns].itertuples():
+        ordinal, meter_id, unit_id, site_id, starts, ends, multiplier, power_factor = row
         span, wrong = span_of(starts, ends, zone)
         if wrong:
             reason = f"the connection of meter {meter_id} {wrong}"
@@ -121,7 +134,14 @@ def _decided(
             heading = "site_id" if site_id is not None else "unit_id"
             findings.append(Finding(ordinal, heading, f"{heading}.unknown", site))
             continue
-        stay = Stay(NEW, meters[meter_id], site, span, 1.0 if multiplier is None else multiplier)
+        stay = Stay(
+            NEW,
+            meters[meter_id],
+            site,
+            span,
+            1.0 if multiplier is None else multiplier,
+            power_factor,
+        )
         elsewhere = book.clash(stay)
         if elsewhere is not None:
             reason = (
@@ -131,5 +151,7 @@ def _decided(
             findings.append(Finding(ordinal, "meter_id", "meter_id.two_sites", reason))
             continue
         fate = book.put(stay)
+        if fate == "unchanged" and classes.changes(ordinal):
+            fate = "corrected"
         setattr(fates, fate, getattr(fates, fate) + 1)
     return fates, findings

@@ -16,7 +16,7 @@ from numba import njit
 from numpy.typing import NDArray
 from sqlalchemy import Connection
 
-from tracker.intake.report import Fates
+from tracker.intake.interval import in_time_order
 from tracker.store import readings as held_readings
 from tracker.store.blocks import (
     FlagArray,
@@ -42,20 +42,12 @@ class Readings:
 
     series: NDArray[np.int32]  #: place in the file's list of series
     start_s: NDArray[np.int64]  #: start of the interval [s since 1970, UTC]
+    step_min: NDArray[np.int16]  #: length of the interval [min]
     value: Float32Array  #: mean over the interval, in the unit of the quantity
     flags: FlagArray
 
     def __len__(self) -> int:
         return len(self.series)
-
-
-@dataclass(frozen=True, slots=True)
-class SeriesFacts:
-    """What is known of each series of a file; arrays of shape (n_series,)."""
-
-    key: NDArray[np.int64]  #: its key in the store
-    step_min: NDArray[np.int32]  #: length of its intervals [min]; 0 where it has no readings here
-    phase_min: NDArray[np.int32]  #: minute that its intervals begin on, below the step
 
 
 @dataclass(frozen=True, slots=True)
@@ -66,16 +58,25 @@ class _Group:
     month: int
     start: int
     stop: int
-    step_min: int
+    step_min: int  #: the longest that all its readings fit
 
 
 def merge(
-    connection: Connection, readings: Readings, facts: SeriesFacts, quantity: str, file_key: int
-) -> tuple[Fates, set[tuple[int, int]]]:
+    connection: Connection,
+    readings: Readings,
+    order: NDArray[np.int64],
+    keys: NDArray[np.int64],
+    quantity: str,
+    file_key: int,
+) -> tuple[NDArray[np.uint8], set[tuple[int, int]]]:
     """Write readings into their blocks.
 
     Parameters
     ----------
+    order : int64, shape (n_reading,)
+        By series and time, those of one moment in the order of the file.
+    keys : int64, shape (n_series,)
+        Key in the store of each series of the file.
     quantity : str
         What the values are; one block holds one quantity.
     file_key : int
@@ -83,15 +84,18 @@ def merge(
 
     Returns
     -------
-    fates : Fates
+    fate : uint8, shape (n_reading,)
+        UNCHANGED, TAKEN or CORRECTED.
     touched : set of (series key, month)
         The blocks that changed.
     """
     if not len(readings):
-        return Fates(), set()
-    readings, facts, first_part = _on_the_grid(readings, facts)
+        return np.zeros(0, dtype=np.uint8), set()
+    readings, first_part = _on_the_grid(readings)
     fate = np.zeros(len(readings), dtype=np.uint8)
-    order, groups = _grouped(readings, facts)
+    if first_part is not None or not _starts_rise(readings.series, readings.start_s, order):
+        order = in_time_order(readings.series, readings.start_s, len(keys))
+    groups = _grouped(readings, order, keys)
     touched: set[tuple[int, int]] = set()
     for month, members in _by_month(groups):
         for part in in_parts(members, BLOCKS_A_BATCH):
@@ -100,78 +104,93 @@ def merge(
             )
     if first_part is not None:
         fate = np.maximum.reduceat(fate, first_part)
-    counts = np.bincount(fate, minlength=4)
-    return Fates(int(counts[TAKEN]), int(counts[UNCHANGED]), int(counts[CORRECTED])), touched
+    return fate, touched
 
 
-def _on_the_grid(
-    readings: Readings, facts: SeriesFacts
-) -> tuple[Readings, SeriesFacts, NDArray[np.intp] | None]:
+def _on_the_grid(readings: Readings) -> tuple[Readings, NDArray[np.intp] | None]:
     """Split readings that do not begin on a multiple of their step, as in zones half an hour off.
 
     Returns the place where the parts of each reading begin, when any was split.
     """
-    if not facts.phase_min.any():
-        return readings, facts, None
-    grid_min = np.gcd(facts.step_min, facts.phase_min)
-    n_part = (facts.step_min // np.maximum(grid_min, 1))[readings.series]
-    begin = np.concatenate(([0], np.cumsum(n_part)[:-1]))
-    part = np.arange(n_part.sum()) - np.repeat(begin, n_part)
-    series = np.repeat(readings.series, n_part)
+    if _all_on_the_grid(readings.start_s, readings.step_min):
+        return readings, None
+    phase_min = (readings.start_s // 60 % readings.step_min).astype(np.int16)
+    grid_min = np.gcd(readings.step_min, phase_min)
+    n_part = readings.step_min // grid_min
+    begin = np.concatenate(([0], np.cumsum(n_part, dtype=np.intp)[:-1]))
+    part = np.arange(n_part.sum(dtype=np.intp)) - np.repeat(begin, n_part)
     split = Readings(
-        series,
-        np.repeat(readings.start_s, n_part) + 60 * part * grid_min.astype(np.int64)[series],
+        np.repeat(readings.series, n_part),
+        np.repeat(readings.start_s, n_part) + 60 * part * np.repeat(grid_min, n_part),
+        np.repeat(grid_min, n_part),
         np.repeat(readings.value, n_part),
         np.repeat(readings.flags, n_part),
     )
-    return split, SeriesFacts(facts.key, grid_min, np.zeros_like(grid_min)), begin
-
-
-def _grouped(readings: Readings, facts: SeriesFacts) -> tuple[NDArray[np.int64], list[_Group]]:
-    """Sort readings by series and month, keeping the file's order within; list the stretches."""
-    first = month_of(int(readings.start_s.min()))
-    last = month_of(int(readings.start_s.max()))
-    n_month = last - first + 1
-    bounds = np.array(
-        [month_start_s(month) for month in range(first + 1, last + 1)], dtype=np.int64
-    )
-    order, starts = _sort_by_group(readings.series, readings.start_s, bounds, len(facts.key))
-    groups = [
-        _Group(
-            int(facts.key[group // n_month]),
-            first + group % n_month,
-            int(starts[group]),
-            int(starts[group + 1]),
-            int(facts.step_min[group // n_month]),
-        )
-        for group in np.flatnonzero(np.diff(starts)).tolist()
-    ]
-    return order, groups
+    return split, begin
 
 
 @njit(cache=True, nogil=True)
-def _sort_by_group(series, start_s, bounds, n_series):  # type: ignore[no-untyped-def]
-    """Counting sort, stable, by series and then month."""
-    n_month = len(bounds) + 1
-    n = len(series)
-    group = np.empty(n, np.int32)
-    starts = np.zeros(n_series * n_month + 1, np.int64)
-    month = 0
-    for i in range(n):
-        while month > 0 and start_s[i] < bounds[month - 1]:
-            month -= 1
-        while month < n_month - 1 and start_s[i] >= bounds[month]:
-            month += 1
-        group[i] = series[i] * n_month + month
-        starts[group[i] + 1] += 1
-    for g in range(n_series * n_month):
-        starts[g + 1] += starts[g]
-    following = starts[:-1].copy()
-    order = np.empty(n, np.int64)
-    for i in range(n):
-        order[following[group[i]]] = i
-        following[group[i]] += 1
-    return order, starts
+def _all_on_the_grid(start_s, step_min):  # type: ignore[no-untyped-def]
+    for i in range(len(start_s)):  # noqa: SIM110 - compiled
+        if start_s[i] % (60 * np.int64(step_min[i])):
+            return False
+    return True
+
+
+@njit(cache=True, nogil=True)
+def _starts_rise(series, start_s, order):  # type: ignore[no-untyped-def]
+    """Say whether intervals begin in order, as they may not where their lengths change."""
+    for at in range(1, len(order)):
+        i, before = order[at], order[at - 1]
+        if series[i] == series[before] and start_s[i] < start_s[before]:
+            return False
+    return True
+
+
+def _grouped(readings: Readings, order: NDArray[np.int64], keys: NDArray[np.int64]) -> list[_Group]:
+    """List the stretches of one series and month."""
+    first = month_of(int(readings.start_s.min()))
+    last = month_of(int(readings.start_s.max()))
+    bounds = np.array([month_start_s(month) for month in range(first, last + 2)], dtype=np.int64)
+    begins, months, steps = _stretches(
+        readings.series, readings.start_s, readings.step_min, order, bounds
+    )
+    series = readings.series[order[begins[:-1]]]
+    return [
+        _Group(*each)
+        for each in zip(
+            keys[series].tolist(),
+            (months + first).tolist(),
+            begins[:-1].tolist(),
+            begins[1:].tolist(),
+            steps.tolist(),
+            strict=True,
+        )
+    ]
+
+
+@njit(cache=True, nogil=True)
+def _stretches(series, start_s, step_min, order, bounds):  # type: ignore[no-untyped-def]
+    """Return where each stretch begins, and the end; the month of each; the step it needs."""
+    begins = np.empty(len(order) + 1, np.int64)
+    months = np.empty(len(order), np.int64)
+    steps = np.empty(len(order), np.int16)
+    n = -1
+    of_series = -1
+    for at in range(len(order)):
+        i = order[at]
+        if series[i] != of_series or start_s[i] >= bounds[months[n] + 1]:
+            month = 0 if series[i] != of_series else months[n]
+            while start_s[i] >= bounds[month + 1]:
+                month += 1
+            n += 1
+            of_series = series[i]
+            begins[n], months[n], steps[n] = at, month, step_min[i]
+        elif step_min[i] != steps[n]:
+            steps[n] = math.gcd(steps[n], step_min[i])
+    n += 1
+    begins[n] = len(order)
+    return begins[: n + 1].copy(), months[:n].copy(), steps[:n].copy()
 
 
 def _by_month(groups: Sequence[_Group]) -> Iterator[tuple[int, list[_Group]]]:
@@ -207,10 +226,11 @@ def _merge_month(
         former, former_flags = np.full_like(values, np.nan), np.zeros_like(flags)
         dirty, corrected = _scatter(
             readings.start_s,
+            readings.step_min,
             readings.value,
             readings.flags,
             order,
-            np.array([(g.start, g.stop, g.step_min // step) for g in members], dtype=np.int64),
+            np.array([(g.start, g.stop) for g in members], dtype=np.int64),
             month_start_s(month),
             60 * step,
             values,
@@ -257,6 +277,7 @@ def regridded(
 @njit(cache=True, nogil=True)
 def _scatter(  # type: ignore[no-untyped-def]
     start_s,
+    step_min,
     value,
     flag,
     order,
@@ -271,7 +292,7 @@ def _scatter(  # type: ignore[no-untyped-def]
 ):
     """Put readings in their places, in file order, and note what became of each.
 
-    A stretch is (first, last + 1) in `order`, and how many places each of its readings fills.
+    A stretch is (first, last + 1) in `order`.
     """
     n_group = len(stretches)
     dirty = np.zeros(n_group, np.bool_)
@@ -281,7 +302,7 @@ def _scatter(  # type: ignore[no-untyped-def]
             i = order[at]
             first = (start_s[i] - month_s) // step_s
             outcome = 1
-            for place in range(first, first + stretches[g, 2]):
+            for place in range(first, first + 60 * np.int64(step_min[i]) // step_s):
                 if flags[g, place] == 0:
                     outcome = max(outcome, 2)
                 elif values[g, place] == value[i] and flags[g, place] == flag[i]:

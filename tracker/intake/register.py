@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import datetime as dt
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Literal
@@ -27,6 +28,11 @@ class Column:
     choices: tuple[str, ...] = ()  #: allowed words, as they are kept
     numbers: tuple[float, ...] = ()  #: allowed numbers
     required: bool = False
+
+    @property
+    def is_number(self) -> bool:
+        """Whether its cells hold numbers."""
+        return self.kind in ("number", "whole")
 
     @property
     def allowed(self) -> str:
@@ -63,7 +69,9 @@ def read_register(source: Source, columns: Sequence[Column]) -> RegisterRows:
         If a required heading is missing, or the file cannot be read to its end.
     """
     missing = [
-        column.heading for column in columns if column.required and not source.has(column.heading)
+        column.heading + source.said_of(column.heading)
+        for column in columns
+        if column.required and not source.has(column.heading)
     ]
     if missing:
         raise IntakeError(
@@ -71,13 +79,20 @@ def read_register(source: Source, columns: Sequence[Column]) -> RegisterRows:
             f"found {', '.join(source.headings[:30])}."
         )
     present = [column for column in columns if source.has(column.heading)]
-    texts = source.frame({column.heading: source.text_of(column.heading) for column in present})
+    select = {column.heading: source.text_of(column.heading) for column in present}
+    select |= {
+        f"number_{column.heading}": source.number_of(column.heading)
+        for column in present
+        if column.is_number
+    }
+    texts = source.frame(select)
     good = pd.Series(True, index=texts.index)
     findings: list[Finding] = []
     checked: dict[str, pd.Series] = {}
     for column in present:
         text = texts[column.heading].astype(object).where(texts[column.heading].notna(), None)
-        values, problems = _checked(column, text)
+        numbers = texts[f"number_{column.heading}"] if column.is_number else None
+        values, problems = _checked(column, text, numbers, source.guide.readings.date_format)
         for ordinal, (code, reason) in problems.items():
             if good[ordinal]:
                 findings.append(Finding(ordinal, column.heading, code, reason))
@@ -90,21 +105,20 @@ def read_register(source: Source, columns: Sequence[Column]) -> RegisterRows:
     return RegisterRows(frame.where(frame.notna(), None), findings)
 
 
-def _checked(column: Column, text: pd.Series) -> tuple[pd.Series, dict[int, tuple[str, str]]]:
+def _checked(
+    column: Column, text: pd.Series, numbers: pd.Series | None, date_format: str | None
+) -> tuple[pd.Series, dict[int, tuple[str, str]]]:
     """Return the values of a column, and what is wrong by ordinal."""
     problems: dict[int, tuple[str, str]] = {}
     given = text.notna()
     if column.required:
         for ordinal in text.index[~given]:
             problems[ordinal] = (f"{column.heading}.blank", f"{column.heading} is blank")
-    if column.kind in ("number", "whole"):
-        values, wrong, code = _numbers(column, text, given)
+    if numbers is not None:
+        values, wrong, code = _numbers(column, numbers.astype(float), given)
     elif column.kind == "date":
-        values, wrong, code = (
-            text,
-            given & ~text.map(_is_date, na_action="ignore").eq(True),
-            "no_date",
-        )
+        values = text.map(lambda word: _iso_date(word, date_format), na_action="ignore")
+        wrong, code = given & values.isna(), "no_date"
     elif column.choices:
         folded = {choice.casefold(): choice for choice in column.choices}
         values = text.map(lambda word: folded.get(word.casefold()), na_action="ignore")
@@ -119,8 +133,9 @@ def _checked(column: Column, text: pd.Series) -> tuple[pd.Series, dict[int, tupl
     return values.where(values.notna(), None), problems
 
 
-def _numbers(column: Column, text: pd.Series, given: pd.Series) -> tuple[pd.Series, pd.Series, str]:
-    numbers = pd.to_numeric(text, errors="coerce").astype(float)
+def _numbers(
+    column: Column, numbers: pd.Series, given: pd.Series
+) -> tuple[pd.Series, pd.Series, str]:
     fits = np.isfinite(numbers) & (numbers >= column.low) & (numbers <= column.high)
     if column.above is not None:
         fits &= numbers > column.above
@@ -134,9 +149,11 @@ def _numbers(column: Column, text: pd.Series, given: pd.Series) -> tuple[pd.Seri
     return values.where(given, None), given & ~fits, "not_allowed"
 
 
-def _is_date(text: str) -> bool:
+def _iso_date(text: str, date_format: str | None) -> str | None:
+    """Return a date as ISO 8601 writes it; None when the text is none."""
     try:
-        pd.Timestamp.fromisoformat(text)
+        if date_format is not None:
+            return dt.datetime.strptime(text, date_format).date().isoformat()
+        return dt.date.fromisoformat(text).isoformat() if len(text) == len("2025-07-01") else None
     except ValueError:
-        return False
-    return len(text) == len("2025-07-01")
+        return None

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import datetime as dt
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from zoneinfo import ZoneInfo
 
 from tracker.intake.stamps import day_start
@@ -79,11 +79,7 @@ def _replaces(stay: Stay, other: Stay) -> bool:
 
 
 def _same(one: Stay, other: Stay) -> bool:
-    return (one.site_key, one.span, one.multiplier) == (
-        other.site_key,
-        other.span,
-        other.multiplier,
-    )
+    return replace(one, key=NEW) == replace(other, key=NEW)
 
 
 class Numbers:

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Collection, Iterable, Mapping
+from collections.abc import Set as AbstractSet
 from dataclasses import replace
 from typing import Any
 from zoneinfo import ZoneInfo
@@ -13,12 +14,12 @@ from sqlalchemy import Connection
 from tracker.errors import ModelRangeError
 from tracker.fleet.nameplate import COOLING_FLOW, completed
 from tracker.intake.register import Column, read_register
-from tracker.intake.report import Fates, FileReport, Finding
-from tracker.intake.site_load import derive_sites
+from tracker.intake.report import Fates, Finding, Findings, Outcome
+from tracker.intake.site_load import Derived, derive_after
 from tracker.intake.source import Source
 from tracker.intake.stays import NEW, Numbers, StayBook, span_of
 from tracker.store import fleet
-from tracker.store import readings as held_readings
+from tracker.store import members as on_sites
 from tracker.store.fleet import Stay
 from tracker.store.models import Placement, Site, Unit
 
@@ -53,8 +54,16 @@ COLUMNS = (
     Column("winding_time_constant_h", "number", above=0, high=10),
 )
 
+#: Columns that a site's load depends on: the rules look at ratings, amperes need volts and phases.
+OF_LOAD = frozenset({"rated_kva", "phases", "hv_volts", "lv_volts"})
+#: Columns that lights from dusk to dawn depend on.
+OF_DAYLIGHT = frozenset({"latitude", "longitude"})
 
-def take_units(connection: Connection, source: Source, zone: ZoneInfo | None) -> FileReport:
+#: Columns that changed, by id.
+Changed = Mapping[str, AbstractSet[str]]
+
+
+def take_units(connection: Connection, source: Source, zone: ZoneInfo | None) -> Outcome:
     """Take a register of units into the store.
 
     Raises
@@ -73,16 +82,39 @@ def take_units(connection: Connection, source: Source, zone: ZoneInfo | None) ->
     frame["site_id"] = frame["site_id"].where(frame["site_id"].notna(), home)
     plan.decide(frame, given)
     frame = frame.drop(index=[finding.ordinal for finding in plan.findings])
-    corrected_sites = _put_sites(connection, frame, given)
-    corrected_units = _put_units(connection, frame, given)
-    plan.write(connection)
-    return FileReport(
-        source.name,
-        "units",
-        _fates(frame, plan.fate, corrected_units, corrected_sites),
-        source.refusals([*rows.findings, *findings, *plan.findings]),
+    changed_sites = _put_sites(connection, frame, given)
+    changed_units = _put_units(connection, frame, given)
+    moved = plan.write(connection)
+    derived = _derived(connection, changed_units, changed_sites, moved)
+    return Outcome(
+        _fates(frame, plan.fate, changed_units.keys(), changed_sites.keys()),
+        Findings.of([*rows.findings, *findings, *plan.findings]),
         source.left_out([column.heading for column in COLUMNS]),
+        derived.notes(),
+        derived.as_facts(),
     )
+
+
+def _derived(
+    connection: Connection, units: Changed, sites: Changed, moved: Collection[int]
+) -> Derived:
+    """Derive anew the load of sites that a changed unit or place touches.
+
+    Parameters
+    ----------
+    units, sites : mapping of id to changed columns
+    moved : collection of int
+        Sites at which another unit stands than before.
+    """
+    unit_keys = _keys(fleet.units(connection, units.keys()), "unit_id")
+    rated = [unit_keys[name] for name, columns in units.items() if columns & OF_LOAD]
+    touched = {stay.site_key for stay in fleet.placements(connection, rated)} | set(moved)
+    site_keys = _keys(fleet.sites(connection), "site_id")
+    touched |= {site_keys[name] for name, columns in sites.items() if columns & OF_DAYLIGHT}
+    on_feeder = [site_keys[name] for name, columns in sites.items() if "feeder" in columns]
+    members = on_sites.site_members(connection, on_feeder)
+    meters = {member.series_key for member in members if not member.whole_site}
+    return derive_after(connection, sites=touched, meters=meters)
 
 
 class _Plan:
@@ -148,8 +180,8 @@ class _Plan:
             )
         return "", ""
 
-    def write(self, connection: Connection) -> None:
-        """Write the placements, and derive anew the load of sites whose measured unit changed."""
+    def write(self, connection: Connection) -> set[int]:
+        """Write the placements; return the sites at which one began, ended or changed."""
         unit_keys = self._units.keys(_keys(fleet.units(connection), "unit_id"))
         site_keys = self._sites.keys(_keys(fleet.sites(connection), "site_id"))
         added = [
@@ -158,20 +190,7 @@ class _Plan:
         ]
         fleet.remove_stays(connection, Placement, [stay.key for stay in self._book.removed])
         fleet.add_placements(connection, added)
-        derive_sites(connection, _measured_months(connection, [*added, *self._book.removed]))
-
-
-def _measured_months(connection: Connection, stays: Sequence[Stay]) -> set[tuple[int, int]]:
-    """Return the (site, month) that readings at the transformer itself are held of."""
-    series = fleet.unit_series(connection)
-    measured = {series[stay.who]: stay.site_key for stay in stays if stay.who in series}
-    months = held_readings.months_of_series(connection, list(measured))
-    return {
-        (stay.site_key, month)
-        for stay in stays
-        for key, month in months
-        if series.get(stay.who) == key
-    }
+        return {stay.site_key for stay in [*added, *self._book.removed]}
 
 
 def _keys(rows: Iterable[Mapping[str, Any]], name: str) -> dict[str, int]:
@@ -179,7 +198,10 @@ def _keys(rows: Iterable[Mapping[str, Any]], name: str) -> dict[str, int]:
 
 
 def _fates(
-    frame: pd.DataFrame, placed: Mapping[int, str], units: set[str], sites: set[str]
+    frame: pd.DataFrame,
+    placed: Mapping[int, str],
+    units: Collection[str],
+    sites: Collection[str],
 ) -> Fates:
     """A row is corrected when its unit, its place, or what it last says of the site changed."""
     last_of_site = frame.index[~frame["site_id"].duplicated(keep="last")]
@@ -224,8 +246,8 @@ def _without_contradictions(frame: pd.DataFrame) -> tuple[pd.DataFrame, list[Fin
     return frame.drop(index=[finding.ordinal for finding in findings]), findings
 
 
-def _put_sites(connection: Connection, frame: pd.DataFrame, given: set[str]) -> set[str]:
-    """Write the sites of the file; return those that changed.
+def _put_sites(connection: Connection, frame: pd.DataFrame, given: set[str]) -> Changed:
+    """Write the sites of the file; return what changed of which.
 
     Where several rows are of one site, the last that says something counts. What the file has no
     column for, a site that is held keeps.
@@ -234,8 +256,8 @@ def _put_sites(connection: Connection, frame: pd.DataFrame, given: set[str]) -> 
     return _put(connection, Site, named, fleet.sites(connection), given)
 
 
-def _put_units(connection: Connection, frame: pd.DataFrame, given: set[str]) -> set[str]:
-    """Write the nameplates of the file; return the ids of changed units."""
+def _put_units(connection: Connection, frame: pd.DataFrame, given: set[str]) -> Changed:
+    """Write the nameplates of the file; return what changed of which."""
     named = frame.groupby("unit_id", sort=False)[list(fleet.UNIT_COLUMNS)].first()
     return _put(connection, Unit, named, fleet.units(connection), given)
 
@@ -246,12 +268,12 @@ def _put(
     named: pd.DataFrame,
     rows_held: Iterable[dict[str, Any]],
     given: set[str],
-) -> set[str]:
-    """Write rows that their index names; return the names of those held that changed."""
+) -> Changed:
+    """Write rows that their index names; return the columns that changed of those held."""
     id_column = str(named.index.name)
     wanted = named.astype(object).where(named.notna(), None)
     held = {row[id_column]: row for row in rows_held}
-    corrected: set[str] = set()
+    changed: dict[str, set[str]] = {}
     new: list[dict[str, Any]] = []
     for row in wanted.reset_index().to_dict("records"):
         values = {str(name): value for name, value in row.items()}
@@ -260,8 +282,9 @@ def _put(
             new.append(values)
             continue
         said = {column: value for column, value in values.items() if column in given}
-        if any(held[name][column] != value for column, value in said.items()):
+        other = {column for column, value in said.items() if held[name][column] != value}
+        if other:
             fleet.change_row(connection, table, held[name]["id"], said)
-            corrected.add(name)
+            changed[name] = other
     fleet.add_rows(connection, table, new)
-    return corrected
+    return changed

@@ -11,10 +11,11 @@ import pandas as pd
 from tracker.assessment.profiles import Period
 from tracker.errors import InputError
 from tracker.planning.right_size import Candidate, suggested_ratings
-from tracker.settings import LEAST_COVERAGE_PCT, AssessmentSettings
+from tracker.planning.standing import why_apart
+from tracker.settings import AssessmentSettings
 from tracker.store import fleet
 from tracker.store.engine import Database
-from tracker.store.results import latest_assessment, ranking_page
+from tracker.store.results import APART, WITHOUT_FIGURES, latest_assessment, ranking_page
 
 #: Columns of the list that others rely on, in this order; others may follow.
 PRIORITY_COLUMNS = (
@@ -58,8 +59,8 @@ def priority_list(database: Database) -> pd.DataFrame:
 
     First come units over the hot-spot limit, then units aging faster than normal, then units over
     their rating, then the rest; within each, the fastest aging first, and ties by unit id. Units
-    whose data cover too little of the period are ranked after all others, and those that were
-    removed last.
+    of whose energy too little was measured are ranked after all others, and those that were removed
+    last.
 
     Returns
     -------
@@ -115,9 +116,9 @@ def _is_unfit(row: Mapping[str, Any], limit_c: float) -> bool:
 
 
 def _urgency(row: Mapping[str, Any]) -> int:
-    if row["peak_hot_spot_c"] is None:
+    if row["standing"] == WITHOUT_FIGURES:
         return _NO_DATA
-    if row["coverage_pct"] < LEAST_COVERAGE_PCT:
+    if row["standing"] == APART:
         return _THIN_DATA
     if row["hours_over_hot_spot_limit"] > 0:
         return _OVER_LIMIT
@@ -132,11 +133,12 @@ def _reasons(
     """Say in plain words why a unit stands where it stands."""
     if removed_at is not None:
         return f"removed on {removed_at:%Y-%m-%d}"
-    if row["peak_hot_spot_c"] is None:
+    if row["standing"] == WITHOUT_FIGURES:
         return "no load or no air temperature is known: cannot be judged"
     reasons = []
-    if row["coverage_pct"] < LEAST_COVERAGE_PCT:
-        reasons.append(f"ranked apart: data cover only {row['coverage_pct']:.0f} % of the period")
+    apart = why_apart(row)
+    if apart:
+        reasons.append(f"ranked apart: {apart}")
     if row["hours_over_hot_spot_limit"] > 0:
         reasons.append(
             f"hot spot over {limit_c:g} °C for {_hours(row['hours_over_hot_spot_limit'])} h, "

@@ -51,6 +51,10 @@ class Quality(IntFlag):
     HELD = 1  #: a value is there
     ESTIMATED = 2  #: the utility marked the reading as estimated
     SCALED = 4  #: site load raised for meters that are missing
+    FILLED = 8  #: a short gap, filled by a straight line
+    LIKE_DAYS = 16  #: a longer gap, filled by the mean of like days
+    DOUBTFUL = 32  #: a rule of validation doubts the reading
+    SPREAD = 64  #: energy of a month, spread over its hours
 
 
 def month_of(seconds: int) -> int:
@@ -111,6 +115,15 @@ def pack(values: Float32Array, flags: FlagArray, step_min: int) -> list[bytes]:
 def step_of(payload: bytes) -> int:
     """Return the step [min] of a block without unpacking it."""
     return int.from_bytes(payload[2:4], "little")
+
+
+def n_held(payload: bytes) -> int:
+    """Return how many values a block holds, without unpacking it.
+
+    The flags stand last, a byte each, 0 where nothing is held.
+    """
+    n_value = int.from_bytes(payload[4:8], "little")
+    return n_value - payload.count(b"\0", len(payload) - n_value)
 
 
 def unpack(payloads: Sequence[bytes]) -> tuple[Float32Array, FlagArray]:

@@ -23,13 +23,14 @@ from tracker.store.models import (
     Series,
     Site,
     SiteLoadBlock,
+    SpreadBlock,
     SupersededBlock,
     Unit,
 )
 from tracker.store.results import latest_assessment
 from tracker.store.schema import HEAD
 
-BLOCK_TABLES = (ReadingBlock, SupersededBlock, SiteLoadBlock)
+BLOCK_TABLES = (ReadingBlock, SupersededBlock, SpreadBlock, SiteLoadBlock)
 
 #: Blocks looked at in one go.
 BLOCKS_A_QUERY = 5_000

@@ -60,6 +60,7 @@ class Stay:
     site_key: int
     span: Span
     multiplier: float = 1.0
+    power_factor: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -166,11 +167,12 @@ def connections(connection: Connection) -> list[Stay]:
         MeterConnection.starts_at,
         MeterConnection.ends_at,
         MeterConnection.multiplier,
+        MeterConnection.power_factor,
     ).order_by(
         MeterConnection.meter_key, MeterConnection.starts_at.is_not(None), MeterConnection.starts_at
     )
     return [
-        Stay(row[0], row[1], row[2], Span(row[3], row[4]), row[5])
+        Stay(row[0], row[1], row[2], Span(row[3], row[4]), row[5], row[6])
         for row in connection.execute(query)
     ]
 
@@ -235,6 +237,7 @@ def add_connections(connection: Connection, stays: Sequence[Stay]) -> None:
             "starts_at": stay.span.starts_at,
             "ends_at": stay.span.ends_at,
             "multiplier": stay.multiplier,
+            "power_factor": stay.power_factor,
         }
         for stay in stays
     ]

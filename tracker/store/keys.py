@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from typing import TypeVar
+from typing import Any, TypeVar
+
+from sqlalchemy import ColumnElement
 
 Key = TypeVar("Key")
 
@@ -15,3 +17,16 @@ def in_parts(keys: Sequence[Key], size: int = KEYS_A_QUERY) -> Iterator[Sequence
     """Cut a list of keys into lists that one query can name."""
     for start in range(0, len(keys), size):
         yield keys[start : start + size]
+
+
+def among(column: Any, keys: Sequence[int]) -> ColumnElement[bool]:
+    """Return the condition that a column is one of some keys, given in order.
+
+    Keys that are neighbours all, as most are, need not be named one by one.
+    """
+    condition: ColumnElement[bool]
+    if keys and keys[-1] - keys[0] + 1 == len(keys):
+        condition = column.between(keys[0], keys[-1])
+    else:
+        condition = column.in_(keys)
+    return condition

@@ -130,7 +130,8 @@ class Series(Base):
     id: Mapped[int] = mapped_column(primary_key=True)
     kind: Mapped[str] = mapped_column(String(10))
     name: Mapped[str] = mapped_column(String(ID_LENGTH))
-    power_factor: Mapped[float | None]
+    power_factor: Mapped[float | None]  #: given with its readings, for all of them
+    customer_class: Mapped[str | None] = mapped_column(String(ID_LENGTH))
     __table_args__ = (
         UniqueConstraint("kind", "name"),
         CheckConstraint("kind IN ('meter', 'unit', 'station')", name="kind_known"),
@@ -148,9 +149,11 @@ class MeterConnection(Base):
     starts_at: Mapped[dt.datetime | None]
     ends_at: Mapped[dt.datetime | None]
     multiplier: Mapped[float]
+    power_factor: Mapped[float | None]  #: of this meter; stands before that of its readings
     __table_args__ = (
         CheckConstraint("starts_at < ends_at", name="starts_before_end"),
         CheckConstraint("multiplier > 0", name="multiplier_positive"),
+        CheckConstraint("power_factor > 0 AND power_factor <= 1", name="power_factor_in_range"),
     )
 
 
@@ -163,6 +166,7 @@ class ReadingBlock(Base):
     )
     quantity: Mapped[str] = mapped_column(String(12), primary_key=True)
     month: Mapped[int] = mapped_column(primary_key=True)
+    n_held: Mapped[int]  #: values held, so that blocks with gaps are found without unpacking
     payload: Mapped[bytes] = mapped_column(LargeBinary)
 
 
@@ -188,6 +192,61 @@ class SiteLoadBlock(Base):
     )
     month: Mapped[int] = mapped_column(primary_key=True)
     payload: Mapped[bytes] = mapped_column(LargeBinary)
+    measured: Mapped[bytes | None] = mapped_column(LargeBinary)
+    """Share of the energy of each value that was measured, uint8 in 1/200; NULL: all of it."""
+
+
+class MonthlyEnergy(Base):
+    """Energy of a meter that is read at long intervals, from a moment to a moment.
+
+    A corrected figure stays, with the file that replaced it.
+    """
+
+    __tablename__ = "monthly_energy"
+    id: Mapped[int] = mapped_column(primary_key=True)
+    meter_key: Mapped[int] = mapped_column(ForeignKey("series.id", ondelete="CASCADE"), index=True)
+    starts_at: Mapped[dt.datetime]
+    ends_at: Mapped[dt.datetime]
+    kwh: Mapped[float]
+    replaced_by: Mapped[int | None] = mapped_column(ForeignKey("intake_file.id"))
+    __table_args__ = (CheckConstraint("starts_at < ends_at", name="starts_before_end"),)
+
+
+class SpreadBlock(Base):
+    """One meter's monthly energy spread over the intervals of a month [kW]; derived, packed."""
+
+    __tablename__ = "spread_block"
+    series_key: Mapped[int] = mapped_column(
+        ForeignKey("series.id", ondelete="CASCADE"), primary_key=True
+    )
+    month: Mapped[int] = mapped_column(primary_key=True)
+    payload: Mapped[bytes] = mapped_column(LargeBinary)
+
+
+class UnmeteredLoad(Base):
+    """Load at a site that no meter reads, such as street lights.
+
+    A corrected figure stays, with the file that replaced it.
+    """
+
+    __tablename__ = "unmetered_load"
+    id: Mapped[int] = mapped_column(primary_key=True)
+    site_key: Mapped[int] = mapped_column(ForeignKey("site.id", ondelete="CASCADE"), index=True)
+    hours: Mapped[str] = mapped_column(String(20))
+    kw: Mapped[float]
+    replaced_by: Mapped[int | None] = mapped_column(ForeignKey("intake_file.id"))
+    __table_args__ = (
+        CheckConstraint("hours IN ('always', 'dusk to dawn')", name="hours_known"),
+        CheckConstraint("kw >= 0", name="kw_not_negative"),
+    )
+
+
+class ReadingRule(Base):
+    """A rule of validation and filling that was set otherwise than its default."""
+
+    __tablename__ = "reading_rule"
+    name: Mapped[str] = mapped_column(String(40), primary_key=True)
+    value: Mapped[float]
 
 
 class IntakeFile(Base):
@@ -205,6 +264,7 @@ class IntakeFile(Base):
     unchanged: Mapped[int]
     corrected: Mapped[int]
     refused: Mapped[int]
+    facts: Mapped[dict[str, Any] | None]  #: what was found or assumed on the way
     __table_args__ = (
         CheckConstraint("readings = taken + unchanged + corrected + refused", name="fates_add_up"),
     )

@@ -2,11 +2,10 @@
 
 from __future__ import annotations
 
-import datetime as dt
-from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from collections.abc import Collection, Iterable, Mapping, Sequence
 
 from sqlalchemy import (
+    ColumnElement,
     Connection,
     bindparam,
     delete,
@@ -17,9 +16,10 @@ from sqlalchemy import (
     update,
 )
 
-from tracker.store.blocks import Blocks
-from tracker.store.keys import in_parts
+from tracker.store.blocks import BYTES_A_VALUE, HEADER_BYTES, Blocks, n_held, step_of
+from tracker.store.keys import among, in_parts
 from tracker.store.models import (
+    Base,
     MeterConnection,
     Placement,
     ReadingBlock,
@@ -28,6 +28,12 @@ from tracker.store.models import (
     SupersededBlock,
     Unit,
 )
+
+#: Blocks as a plain table: many are written at a time, and that costs less than as objects.
+_BLOCKS = Base.metadata.tables[ReadingBlock.__tablename__]
+
+#: What load is read in, the quantity that says most first; kvar only stands beside kw.
+LOAD_QUANTITIES = ("kva", "amps_lv", "amps_hv", "kw", "kvar")
 
 
 def series_keys(connection: Connection, kind: str, names: Sequence[str]) -> dict[str, int]:
@@ -44,8 +50,17 @@ def _known_series(connection: Connection, kind: str, names: Sequence[str]) -> di
     known: dict[str, int] = {}
     for part in in_parts(names):
         query = select(Series.name, Series.id).where(Series.kind == kind, Series.name.in_(part))
-        known.update((row.name, row.id) for row in connection.execute(query))
+        known.update(dict(connection.execute(query).all()))
     return known
+
+
+def series_names(connection: Connection, keys: Collection[int]) -> dict[int, str]:
+    """Return the name of each series."""
+    names: dict[int, str] = {}
+    for part in in_parts(sorted(keys)):
+        query = select(Series.id, Series.name).where(Series.id.in_(part))
+        names.update((row[0], row[1]) for row in connection.execute(query))
+    return names
 
 
 def set_power_factor(connection: Connection, keys: Sequence[int], power_factor: float) -> list[int]:
@@ -67,20 +82,35 @@ def held_blocks(
 ) -> dict[int, bytes]:
     """Return the blocks held of some series for one month: {series key: payload}."""
     held: dict[int, bytes] = {}
-    for part in in_parts(keys):
+    for part in in_parts(sorted(keys)):
         query = select(ReadingBlock.series_key, ReadingBlock.payload).where(
-            ReadingBlock.series_key.in_(part),
+            among(ReadingBlock.series_key, part),
             ReadingBlock.quantity == quantity,
             ReadingBlock.month == month,
         )
-        held.update((row.series_key, row.payload) for row in connection.execute(query))
+        held.update(dict(connection.execute(query).all()))
     return held
 
 
-def any_block(connection: Connection, key: int) -> bytes | None:
-    """Return one block of a series, to learn its step; None when there is none."""
-    query = select(ReadingBlock.payload).where(ReadingBlock.series_key == key).limit(1)
-    return connection.scalar(query)
+def steps_held(connection: Connection, keys: Sequence[int]) -> dict[int, int]:
+    """Return the step of the newest block of each of some series [min]: {series key: step}."""
+    steps: dict[int, int] = {}
+    for part in in_parts(keys):
+        newest = (
+            select(ReadingBlock.series_key, func.max(ReadingBlock.month).label("month"))
+            .where(ReadingBlock.series_key.in_(part))
+            .group_by(ReadingBlock.series_key)
+            .subquery()
+        )
+        query = select(ReadingBlock.series_key, ReadingBlock.payload).join(
+            newest,
+            (ReadingBlock.series_key == newest.c.series_key)
+            & (ReadingBlock.month == newest.c.month),
+        )
+        for series_key, payload in connection.execute(query):
+            step = step_of(payload)
+            steps[series_key] = min(step, steps.get(series_key, step))
+    return steps
 
 
 def replace_blocks(
@@ -91,23 +121,28 @@ def replace_blocks(
     held: Iterable[int],
 ) -> None:
     """Write blocks of one month, in place of those of the keys in `held`."""
-    gone = [{"k": key} for key in held if key in payloads]
-    if gone:
+    held_keys = set(held)
+    rows = [
+        {"key": key, "n_held": n_held(payload), "payload": payload}
+        for key, payload in payloads.items()
+    ]
+    former = [row for row in rows if row["key"] in held_keys]
+    new = [row for row in rows if row["key"] not in held_keys]
+    if former:
         connection.execute(
-            delete(ReadingBlock).where(
-                ReadingBlock.series_key == bindparam("k"),
-                ReadingBlock.quantity == quantity,
-                ReadingBlock.month == month,
-            ),
-            gone,
+            update(_BLOCKS)
+            .where(
+                _BLOCKS.c.series_key == bindparam("key"),
+                _BLOCKS.c.quantity == quantity,
+                _BLOCKS.c.month == month,
+            )
+            .values(n_held=bindparam("n_held"), payload=bindparam("payload")),
+            former,
         )
-    if payloads:
+    if new:
         connection.execute(
-            insert(ReadingBlock),
-            [
-                {"series_key": key, "quantity": quantity, "month": month, "payload": payload}
-                for key, payload in payloads.items()
-            ],
+            insert(_BLOCKS).values(series_key=bindparam("key"), quantity=quantity, month=month),
+            new,
         )
 
 
@@ -143,123 +178,157 @@ def keep_superseded(
     connection.execute(insert(SupersededBlock).values(payload=payload, **columns))
 
 
-# --- What hangs on a site -------------------------------------------------------------------------
+def with_own_power_factor(connection: Connection, keys: Sequence[int]) -> set[int]:
+    """Return the meters, of some, that have a power factor of their own in a connection."""
+    return _connected(connection, keys, MeterConnection.power_factor.is_not(None))
 
 
-@dataclass(frozen=True, slots=True)
-class SiteMember:
-    """A series that says something of a site's load, from a moment to a moment."""
-
-    site_key: int
-    series_key: int
-    whole_site: bool  #: measured at the transformer, so it stands for all meters together
-    starts_at: dt.datetime | None
-    ends_at: dt.datetime | None
-    multiplier: float
-    power_factor: float | None
+def connected(connection: Connection, keys: Sequence[int]) -> set[int]:
+    """Return the meters, of some, that hang on a site at any time."""
+    return _connected(connection, keys)
 
 
-def site_members(connection: Connection, site_keys: Sequence[int]) -> list[SiteMember]:
-    """Return all series of some sites, by site and then by name, so that sums are the same always."""
-    members: list[tuple[str, SiteMember]] = []
-    for part in in_parts(site_keys):
-        meters = (
-            select(
-                MeterConnection.site_key,
-                MeterConnection.meter_key,
-                MeterConnection.starts_at,
-                MeterConnection.ends_at,
-                MeterConnection.multiplier,
-                Series.power_factor,
-                Series.name,
-            )
-            .join_from(MeterConnection, Series, MeterConnection.meter_key == Series.id)
-            .where(MeterConnection.site_key.in_(part))
+def _connected(
+    connection: Connection, keys: Sequence[int], *conditions: ColumnElement[bool]
+) -> set[int]:
+    found: set[int] = set()
+    for part in in_parts(keys):
+        query = select(MeterConnection.meter_key).where(
+            MeterConnection.meter_key.in_(part), *conditions
         )
-        members += [
-            (row.name, SiteMember(row[0], row[1], False, *row[2:6]))
-            for row in connection.execute(meters)
-        ]
-        members += _measured_units(connection, part)
-    members.sort(key=lambda named: (named[1].site_key, named[0], str(named[1].starts_at)))
-    return [member for _, member in members]
+        found.update(connection.scalars(query))
+    return found
 
 
-def _measured_units(
-    connection: Connection, site_keys: Sequence[int]
-) -> list[tuple[str, SiteMember]]:
+def unconnected_meters(connection: Connection) -> list[str]:
+    """Return the names of meters that have readings and hang on no site."""
+    read = select(ReadingBlock.series_key).where(ReadingBlock.series_key == Series.id)
+    hangs = select(MeterConnection.id).where(MeterConnection.meter_key == Series.id)
     query = (
-        select(
-            Placement.site_key,
-            Series.id,
-            Placement.starts_at,
-            Placement.ends_at,
-            Series.power_factor,
-            Series.name,
-        )
-        .join_from(Placement, Unit, Placement.unit_key == Unit.id)
-        .join(Series, (Series.kind == "unit") & (Series.name == Unit.unit_id))
-        .where(Placement.site_key.in_(site_keys))
+        select(Series.name)
+        .where(Series.kind == "meter", read.exists(), ~hangs.exists())
+        .order_by(Series.name)
     )
-    return [
-        (row.name, SiteMember(row[0], row[1], True, row[2], row[3], 1.0, row.power_factor))
-        for row in connection.execute(query)
-    ]
+    return list(connection.scalars(query))
+
+
+# --- Where readings count ------------------------------------------------------------------------
 
 
 def sites_of_series(connection: Connection, keys: Sequence[int]) -> dict[int, list[int]]:
     """Return the sites each series says something of, at any time: {series key: site keys}."""
     sites: dict[int, list[int]] = {}
-    for part in in_parts(keys):
+    for part in in_parts(sorted(keys)):
         by_meter = select(MeterConnection.meter_key, MeterConnection.site_key).where(
-            MeterConnection.meter_key.in_(part)
+            among(MeterConnection.meter_key, part)
         )
         by_unit = (
             select(Series.id, Placement.site_key)
             .join_from(Series, Unit, Series.name == Unit.unit_id)
             .join(Placement, Placement.unit_key == Unit.id)
-            .where(Series.kind == "unit", Series.id.in_(part))
+            .where(Series.kind == "unit", among(Series.id, part))
         )
         for query in (by_meter, by_unit):
-            for series_key, site_key in connection.execute(query):
+            for series_key, site_key in connection.execute(query).all():
                 sites.setdefault(series_key, []).append(site_key)
     return sites
+
+
+def load_blocks(
+    connection: Connection, keys: Sequence[int], months: tuple[int, int]
+) -> list[tuple[int, int, str, bytes]]:
+    """Return (series key, month, quantity, payload) of all load that series hold, both months included."""
+    rows: list[tuple[int, int, str, bytes]] = []
+    for part in in_parts(keys):
+        query = select(
+            ReadingBlock.series_key, ReadingBlock.month, ReadingBlock.quantity, ReadingBlock.payload
+        ).where(
+            among(ReadingBlock.series_key, part),
+            ReadingBlock.quantity.in_(LOAD_QUANTITIES),
+            ReadingBlock.month.between(*months),
+        )
+        rows += connection.execute(query).all()
+    return rows
+
+
+def with_gaps(connection: Connection, touched: Collection[tuple[int, int]]) -> set[tuple[int, int]]:
+    """Return those of the (series key, month) of which readings are held, but not all."""
+    found: set[tuple[int, int]] = set()
+    by_month: dict[int, list[int]] = {}
+    for key, month in touched:
+        by_month.setdefault(month, []).append(key)
+    full = func.length(ReadingBlock.payload) - HEADER_BYTES
+    for month, keys in by_month.items():
+        for part in in_parts(sorted(keys)):
+            query = select(ReadingBlock.series_key).where(
+                among(ReadingBlock.series_key, part),
+                ReadingBlock.quantity.in_(LOAD_QUANTITIES),
+                ReadingBlock.month == month,
+                ReadingBlock.n_held * BYTES_A_VALUE < full,
+            )
+            found.update((key, month) for key in connection.scalars(query))
+    return found
 
 
 def months_of_series(connection: Connection, keys: Sequence[int]) -> set[tuple[int, int]]:
     """Return every (series key, month) that readings are held of."""
     found: set[tuple[int, int]] = set()
-    for part in in_parts(keys):
+    for part in in_parts(sorted(keys)):
         query = (
             select(ReadingBlock.series_key, ReadingBlock.month)
-            .where(ReadingBlock.series_key.in_(part))
+            .where(among(ReadingBlock.series_key, part))
             .distinct()
         )
         found.update((row.series_key, row.month) for row in connection.execute(query))
     return found
 
 
+def load_months(connection: Connection) -> list[int]:
+    """Return the months that any reading of load is held of."""
+    query = select(ReadingBlock.month).where(ReadingBlock.quantity.in_(LOAD_QUANTITIES))
+    return list(connection.scalars(query.distinct().order_by(ReadingBlock.month)))
+
+
 # --- Site load ------------------------------------------------------------------------------------
 
 
 def replace_site_load(
-    connection: Connection, month: int, payloads: Mapping[int, bytes | None]
+    connection: Connection,
+    month: int,
+    payloads: Mapping[int, bytes | None],
+    measured: Mapping[int, bytes | None] | None = None,
 ) -> None:
-    """Write the load of sites for one month; None takes away what was there."""
-    keys = list(payloads)
-    for part in in_parts(keys):
+    """Write the load of sites for one month; None takes away what was there.
+
+    `measured` holds the share of each value's energy that was measured, where not all of it was.
+    """
+    for part in in_parts(sorted(payloads)):
         connection.execute(
             delete(SiteLoadBlock).where(
-                SiteLoadBlock.month == month, SiteLoadBlock.site_key.in_(part)
+                SiteLoadBlock.month == month, among(SiteLoadBlock.site_key, part)
             )
         )
+    shares = measured or {}
     rows = [
-        {"site_key": key, "month": month, "payload": payload}
+        {"site_key": key, "month": month, "payload": payload, "measured": shares.get(key)}
         for key, payload in payloads.items()
         if payload is not None
     ]
     if rows:
         connection.execute(insert(SiteLoadBlock), rows)
+
+
+def held_site_loads(
+    connection: Connection, month: int, site_keys: Sequence[int]
+) -> dict[int, tuple[bytes, bytes | None]]:
+    """Return the load held of sites for one month: {site key: (payload, measured share)}."""
+    held: dict[int, tuple[bytes, bytes | None]] = {}
+    for part in in_parts(site_keys):
+        query = select(SiteLoadBlock.site_key, SiteLoadBlock.payload, SiteLoadBlock.measured).where(
+            SiteLoadBlock.month == month, SiteLoadBlock.site_key.in_(part)
+        )
+        held.update((row[0], (row[1], row[2])) for row in connection.execute(query))
+    return held
 
 
 def site_load_months(connection: Connection) -> tuple[int, int] | None:

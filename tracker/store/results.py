@@ -12,6 +12,7 @@ from sqlalchemy import (
     Connection,
     Select,
     and_,
+    case,
     delete,
     func,
     insert,
@@ -21,6 +22,7 @@ from sqlalchemy import (
 )
 
 from tracker.errors import InputError
+from tracker.settings import LEAST_COVERAGE_PCT
 from tracker.store.models import Assessment, IntakeFile, Site, Unit, UnitResult
 
 #: Columns of the ranking: by these names people sort, filter and print.
@@ -45,6 +47,15 @@ TEXT_COLUMNS = frozenset({"unit_id", "site_id", "feeder"})
 HOUR_COLUMNS = frozenset({"hours_over_rating", "hours_over_hot_spot_limit"})
 #: An assessment not finished by then was interrupted.
 FORGOTTEN_AFTER = dt.timedelta(days=1)
+
+#: Where a unit stands whatever the order: among the others, apart for too little of its energy was
+#: measured, or last for nothing is known.
+RANKED, APART, WITHOUT_FIGURES = range(3)
+_STANDING = case(
+    (UnitResult.peak_hot_spot_c.is_(None), WITHOUT_FIGURES),
+    (UnitResult.coverage_pct < LEAST_COVERAGE_PCT, APART),
+    else_=RANKED,
+)
 
 HOTTEST_FIRST = (("peak_hot_spot_c", "desc"),)
 
@@ -142,10 +153,13 @@ def ranking_page(
 ) -> RankingPage:
     """Return rows ``[start, stop)`` of the ranking, sorted and filtered in the database.
 
+    Whatever the order, units of which too little was measured come after all others, and those
+    without figures last; the column `standing` tells which they are.
+
     Parameters
     ----------
     sort : sequence of (column, "asc" or "desc")
-        Units without a figure come last either way; ties break by unit id.
+        Units without a value in the column come last either way; ties break by unit id.
 
     Raises
     ------
@@ -154,6 +168,7 @@ def ranking_page(
     """
     query = _joined(assessment_key).where(*(_condition(each) for each in filters))
     total = connection.scalar(select(func.count()).select_from(query.subquery())) or 0
+    query = query.order_by(_STANDING)
     for name, direction in sort:
         column = _column(name)
         if direction not in ("asc", "desc"):
@@ -187,14 +202,17 @@ def count_units(
 
 
 def hotter_units(connection: Connection, assessment_key: int, unit_id: str) -> int:
-    """Count the units that come before one in the order of peak hot spots, ties by unit id."""
+    """Count the units that come before one in the order of peak hot spots, ties by unit id.
+
+    Units that are ranked apart come before no other.
+    """
     peak_c = RANKING_COLUMNS["peak_hot_spot_c"]
     one = _joined(assessment_key).where(Unit.unit_id == unit_id).subquery()
     hotter = or_(
         peak_c > one.c.peak_hot_spot_c,
         and_(peak_c == one.c.peak_hot_spot_c, Unit.unit_id < unit_id),
     )
-    query = _joined(assessment_key).where(hotter, one.c.unit_id.is_not(None))
+    query = _joined(assessment_key).where(hotter, _STANDING == RANKED, one.c.unit_id.is_not(None))
     counted = query.with_only_columns(func.count(), maintain_column_froms=True)
     return connection.scalar(counted) or 0
 
@@ -220,7 +238,10 @@ def feeders(connection: Connection) -> list[str]:
 
 def _joined(assessment_key: int) -> Select[Any]:
     return (
-        select(*(column.label(name) for name, column in RANKING_COLUMNS.items()))
+        select(
+            *(column.label(name) for name, column in RANKING_COLUMNS.items()),
+            _STANDING.label("standing"),
+        )
         .join_from(UnitResult, Unit, UnitResult.unit_key == Unit.id)
         .outerjoin(Site, UnitResult.site_key == Site.id)
         .where(UnitResult.assessment_key == assessment_key)

@@ -15,7 +15,8 @@
   renderers.HotSpot = function (cell) {
     if (!cell.data) return null;
     const create = window.React.createElement;
-    const words = create("span", { className: "heat-words", key: "words" }, cell.data.heat_words);
+    const kind = cell.data.apart ? "heat-words apart" : "heat-words";
+    const words = create("span", { className: kind, key: "words" }, cell.data.heat_words);
     if (cell.data.heat_step === null) return words;
     const shade = "heat heat-" + cell.data.heat_step;
     const figure = create("span", { className: shade, key: "figure" }, cell.value);
@@ -49,6 +50,11 @@
         const search = query ? "?" + query : "";
         setAddress(search);
         window.sessionStorage.setItem(VIEW, search);
+        return window.dash_clientside.no_update;
+      },
+      /* Write the feeder whose doubts are shown into the address. */
+      keepFeeder: function (feeder) {
+        setAddress(feeder ? "?" + new URLSearchParams({ feeder: feeder }).toString() : "");
         return window.dash_clientside.no_update;
       },
       backToRanking: function () {

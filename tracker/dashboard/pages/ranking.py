@@ -6,7 +6,6 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from itertools import pairwise
 from typing import Any
-from urllib.parse import urlencode
 
 import dash_ag_grid as dag
 import dash_mantine_components as dmc
@@ -51,6 +50,7 @@ from tracker.dashboard.words import (
     significant,
 )
 from tracker.errors import InputError, TrackerError
+from tracker.planning.standing import why_apart
 from tracker.settings import LEAST_COVERAGE_PCT, AssessmentSettings
 from tracker.store.engine import Database
 from tracker.store.results import (
@@ -103,14 +103,14 @@ CARD_COLUMNS = frozenset(each.column for card in CARDS.values() for each in card
 
 WIDTHS = {
     "unit_id": 120,
-    "peak_hot_spot_c": 216,
+    "peak_hot_spot_c": 214,
     "peak_hot_spot_at": 152,
     "peak_load_pct": 100,
     "hours_over_rating": 94,
     "hours_over_hot_spot_limit": 108,
     "aging_factor": 102,
     "life_used_pct": 92,
-    "feeder": 146,
+    "feeder": 140,
     "rated_kva": 84,
     "coverage_pct": 108,
     "peak_top_oil_c": 106,
@@ -150,23 +150,24 @@ def rows_for(database: Database, request: Mapping[str, Any]) -> dict[str, Any]:
 
 def shown_row(row: Mapping[str, Any], place: int, limit_c: float) -> dict[str, Any]:
     """Write one row of the ranking as people read it; every cell is text."""
-    peak_c = row["peak_hot_spot_c"]
+    peak_c, apart = row["peak_hot_spot_c"], why_apart(row)
     if peak_c is None:
         step, words = None, _reason(row)
     else:
         heat = heat_of(peak_c, reference_hot_spot_c(row["winding_rise_c"]), limit_c)
-        step, words = heat.step, heat.words
+        step, words = heat.step, apart or heat.words
     known = peak_c is not None
     return {
-        "place": f"{place:,}",
+        "place": "apart" if apart else f"{place:,}",
         "unit_id": row["unit_id"],
-        "href": unit_address(row["unit_id"]),
+        "href": parts.unit_address(row["unit_id"]),
         "feeder": row["feeder"] or NONE,
         "site_id": row["site_id"] or NONE,
         "rated_kva": plain(row["rated_kva"]),
         "peak_hot_spot_c": decimals(peak_c, 1),
         "heat_step": step,
         "heat_words": words,
+        "apart": apart is not None,
         "peak_hot_spot_at": moment(row["peak_hot_spot_at"]),
         "peak_top_oil_c": decimals(row["peak_top_oil_c"], 1),
         "peak_load_pct": decimals(row["peak_load_pct"], 0),
@@ -178,11 +179,6 @@ def shown_row(row: Mapping[str, Any], place: int, limit_c: float) -> dict[str, A
         "life_used_pct": significant(row["life_used_pct"]),
         "coverage_pct": decimals(row["coverage_pct"], 1),
     }
-
-
-def unit_address(unit_id: str) -> str:
-    """Return the address of a unit's page, seen from the ranking."""
-    return f"unit?{urlencode({'unit_id': unit_id})}"
 
 
 @dataclass(frozen=True, slots=True)
@@ -259,9 +255,17 @@ def layout(**query: Any) -> html.Main:
                 [
                     html.H1("Ranking by hot spot"),
                     html.P(
-                        "Every unit of the fleet, hottest first. "
+                        "Every unit of the fleet, hottest first; those of whose energy too little "
+                        "is measured stand apart, after the others. "
                         "Filters and order are kept in the address: send it as it stands.",
                         className="lead",
+                    ),
+                    html.P(
+                        [
+                            html.A("Connections in doubt", href="doubtful", id=f"{PAGE}-doubts"),
+                            ": units whose figures suggest a wrong meter-to-unit connection.",
+                        ],
+                        className="see-also",
                     ),
                 ],
                 className="page-head",
@@ -382,7 +386,7 @@ def _columns() -> list[dict[str, Any]]:
         "field": "place",
         "headerName": "#",
         "headerTooltip": "Place in the order shown",
-        "width": 52,
+        "width": 60,
         "sortable": False,
         "pinned": "left",
         "type": "rightAligned",

@@ -24,8 +24,17 @@ from dash.development.base_component import Component
 
 from tracker.assessment.trace import UnitTrace, unit_trace
 from tracker.dashboard import parts
-from tracker.dashboard.figures import FIGURE_HEIGHT, MOST_POINTS, Limits, limit_lines, unit_figure
+from tracker.dashboard.figures import (
+    FIGURE_HEIGHT,
+    MOST_POINTS,
+    Limits,
+    hours_of,
+    lanes_of,
+    limit_lines,
+    unit_figure,
+)
 from tracker.dashboard.words import (
+    LOAD_ORIGINS,
     NONE,
     counted,
     decimals,
@@ -38,6 +47,7 @@ from tracker.dashboard.words import (
 from tracker.errors import InputError, TrackerError
 from tracker.fleet.cautions import assumed_pcb
 from tracker.fleet.nameplate import CHARACTERISTICS, Origin, completed
+from tracker.planning.standing import why_apart
 from tracker.settings import AssessmentSettings
 from tracker.store.engine import Database
 from tracker.store.fleet import Span, UnitRecord, unit_record
@@ -140,6 +150,13 @@ def unit_page(database: Database, unit_id: str) -> UnitPage:
     return UnitPage(record, assessment, rows[0] if rows else None, place, total, since)
 
 
+def place_words(page: UnitPage) -> str:
+    """Say where the unit stands in the ranking, which it is no part of when it stands apart."""
+    if page.row is not None and why_apart(page.row):
+        return "ranked apart"
+    return f"{page.hotter + 1:,} of {page.assessed:,}"
+
+
 def plate_rows(record: UnitRecord) -> list[PlateRow]:
     """Return the nameplate's figures with their origins, those that heat depends on filled in."""
     figures = completed(record.nameplate)
@@ -223,6 +240,39 @@ def missing_words(trace: UnitTrace) -> str:
         if hours:
             lacks.append(f"{hours:,.0f} h without {what}")
     return f"Gaps: {' and '.join(lacks)}; they count in no figure." if lacks else ""
+
+
+def origin_words(trace: UnitTrace) -> str:
+    """Say in plain words how load and air temperature came about; empty where neither is known.
+
+    A gap in the load is no part of it: `missing_words` speaks of those.
+    """
+    known = np.isfinite(trace.load_kva)
+    if not known.any():
+        return ""
+    energy = trace.load_kva[known]
+    measured = float(np.sum(energy * trace.measured_share[known]))
+    share = measured / float(energy.sum()) if energy.any() else 1.0
+    lanes = [f"{LOAD_ORIGINS[flag]} in {hours_of(trace, flag):,.4g} h" for flag in lanes_of(trace)]
+    if share == 1.0 and not lanes:
+        words = "All of the load was measured."
+    else:
+        words = f"Of the load's energy {decimals(100 * share, 1)} % was measured."
+    if lanes:
+        words += f" Some of the load is {_listed(lanes)}."
+    bridged_h = np.count_nonzero(trace.air_filled) * trace.step_h
+    if bridged_h:
+        words += f" The air temperature is bridged by a straight line in {bridged_h:,.4g} h."
+    return words
+
+
+def _listed(words: list[str]) -> str:
+    """Join words as a person would.
+
+    >>> _listed(["a", "b", "c"]), _listed(["a"])
+    ('a, b and c', 'a')
+    """
+    return " and ".join(filter(None, (", ".join(words[:-1]), words[-1])))
 
 
 def _moment(seconds: np.int64) -> dt.datetime:
@@ -328,7 +378,13 @@ def _news(page: UnitPage, database: Database) -> list[Component | None]:
     if page.row["peak_hot_spot_c"] is None:
         trace, _ = trace_for(database, page.record.unit_id)
         return [parts.staleness(page.files_since), parts.notice(missing_words(trace))]
-    return [parts.staleness(page.files_since)]
+    apart = why_apart(page.row)
+    return [
+        parts.staleness(page.files_since),
+        parts.notice(f"Ranked apart: {apart}. Its peaks and its aging may lie in what is missing.")
+        if apart
+        else None,
+    ]
 
 
 def _key_figures(page: UnitPage, database: Database) -> list[Component]:
@@ -343,7 +399,7 @@ def _key_figures(page: UnitPage, database: Database) -> list[Component]:
     figures: list[tuple[str, parts.Child]] = [
         ("Peak hot spot, °C", parts.heat_mark(row["peak_hot_spot_c"], heat)),
         ("Peak at, UTC", moment(row["peak_hot_spot_at"])),
-        ("Place by hot spot", f"{page.hotter + 1:,} of {page.assessed:,}"),
+        ("Place by hot spot", place_words(page)),
         ("Peak load", f"{decimals(row['peak_load_pct'], 0)} % of rating"),
         ("Peak top oil", f"{decimals(row['peak_top_oil_c'], 1)} °C"),
         ("Over rating", f"{decimals(row['hours_over_rating'], 1)} h"),
@@ -434,6 +490,8 @@ def _note(trace: UnitTrace, limits: Limits) -> list[str | Component]:
         "top oil and hot spot stand at its end."
     )
     sentences = [
+        origin_words(trace),
+        "The lanes below the load show where." if lanes_of(trace) else "",
         missing_words(trace),
         stamps,
         f"Not drawn, well above these temperatures: {', '.join(far)}." if far else "",
