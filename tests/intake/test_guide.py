@@ -411,6 +411,7 @@ def test_drafts_of_weather(tmp_path) -> None:
             "%d/%m/%Y %H:%M",
             "likelier",
         ),
+        ([f"{day:02d}/07/2025 00:00" for day in range(4, 14)], "%d/%m/%Y %H:%M", ""),
         (["07/07/2025 00:00", "07/07/2025 01:00"], "%m/%d/%Y %H:%M", "cannot be told"),
         (["13-Jul-25 1:00 PM", "14-Jul-25 2:00 AM"], "%d-%b-%y %I:%M %p", ""),
         (["20250713 0100", "20250713 0200"], None, ""),
@@ -428,6 +429,10 @@ def test_how_stamps_are_written_is_told_from_the_data(tmp_path, stamps, pattern,
     text, guide = drafted(tmp_path, f"Meter|Timestamp|Consumption\n{rows}")
     assert guide.stamp_format == pattern
     assert said in text
+    of_pattern = [line for line in text.splitlines() if line.startswith("stamp_format")]
+    assert all(
+        ("unsure" in line) == (said in ("likelier", "cannot be told")) for line in of_pattern
+    )
 
 
 def test_codes_that_are_not_known_are_left_to_the_person(tmp_path) -> None:

@@ -1,4 +1,4 @@
-"""Columns of text in a batch of rows: each distinct text is looked at once."""
+"""Columns of a batch of rows: what they mean, and which rows cannot be taken."""
 
 from __future__ import annotations
 
@@ -14,25 +14,10 @@ from tracker.intake.quality import MISSING, QualityCodes
 from tracker.intake.readings import ReadingsIntake
 from tracker.intake.report import Findings
 from tracker.intake.rows import Source
-from tracker.intake.stamps import StampTable
+from tracker.intake.stamps import NO_STAMP, StampTable
+from tracker.intake.texts import KnownTexts, Texts
 from tracker.store.blocks import Quality
 from tracker.store.models import ID_LENGTH
-
-
-@dataclass(frozen=True, slots=True)
-class Texts:
-    """A column of text: its distinct texts, trimmed, None last, and the place of each row's."""
-
-    distinct: list[str | None]
-    place: NDArray[np.int32]
-
-    @classmethod
-    def of(cls, column: pa.Array) -> Texts:
-        """Take the texts of a column apart."""
-        encoded = column.dictionary_encode()
-        texts: list[str | None] = [text.strip() or None for text in encoded.dictionary.to_pylist()]
-        places = pc.fill_null(encoded.indices, len(texts)).to_numpy(zero_copy_only=False)
-        return cls([*texts, None], places)
 
 
 def numbers_of(column: pa.Array) -> NDArray[np.float64]:
@@ -52,21 +37,17 @@ def series_of(
 
     `good` says which rows are still in play, and loses those refused.
     """
-    codes = np.full(len(names.distinct), -1, dtype=np.int32)
-    for place, name in enumerate(names.distinct):
-        if name is not None and len(name) <= ID_LENGTH:
-            codes[place] = intake.place_of(name)
-    for place in np.flatnonzero(codes < 0).tolist():
-        lost = good & (names.place == place)
-        if lost.any():
-            code, reason = (
-                ("id.blank", f"{heading} is blank")
-                if names.distinct[place] is None
-                else ("id.too_long", f"{heading} is longer than {ID_LENGTH} characters")
-            )
-            refuse(lost, heading, code, reason)
-            good &= ~lost
-    return codes[names.place]
+    series = intake.places_of(names.distinct)[names.place]
+    lost = good & (series < 0)
+    for place in np.unique(names.place[lost]).tolist():
+        code, reason = (
+            ("id.blank", f"{heading} is blank")
+            if names.distinct[place] is None
+            else ("id.too_long", f"{heading} is longer than {ID_LENGTH} characters")
+        )
+        refuse(lost & (names.place == place), heading, code, reason)
+    good &= ~lost
+    return series
 
 
 def refuse_stamps(
@@ -77,11 +58,12 @@ def refuse_stamps(
     refuse: Refuse,
 ) -> None:
     """Refuse rows whose stamp could not be read."""
-    for place, (code, reason) in table.problems.items():
-        lost = good & (places == place)
-        if lost.any():
-            refuse(lost, heading, code, reason)
-            good &= ~lost
+    if not table.problems:
+        return
+    lost = good & (table.first_s == NO_STAMP)[places]
+    for place in np.unique(places[lost]).tolist():
+        refuse(lost & (places == place), heading, *table.problems[place])
+    good &= ~lost
 
 
 def flags_of(
@@ -118,7 +100,7 @@ def refuse_texts(texts: pa.Array, good: NDArray[np.bool_], heading: str, refuse:
     """Refuse rows in whose cell stands a text that is no number; `texts` is NULL elsewhere."""
     if texts.null_count == len(texts):
         return
-    wrong = Texts.of(texts)
+    wrong = KnownTexts().of(texts)
     for place, text in enumerate(wrong.distinct):
         lost = good & (wrong.place == place)
         if text is not None and lost.any():

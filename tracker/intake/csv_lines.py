@@ -32,16 +32,17 @@ class Survey:
     checksum: str  #: of all of them
     n_line: int
     one_line_end: bool  #: all lines end alike, in LF or in CR LF
+    quoted_rows: bool  #: a quote stands behind the headings
     quotes_in_order: bool  #: a quote opens and closes a field, or is doubled in one; within a line
     lines_short: bool  #: no line is longer than `LONGEST_RECORD`
 
 
-def survey(file: BinaryIO, separator: str) -> Survey:
-    """Look at every byte of a file once."""
+def survey(file: BinaryIO, separator: str, n_before: int) -> Survey:
+    """Look at every byte of a file once; so many lines stand up to the headings."""
     digest = xxhash.xxh3_128()
     room = bytearray(BLOCK_BYTES)
     n_newline = n_return = n_pair = 0
-    quotes_in_order = lines_short = True
+    quoted_rows, quotes_in_order, lines_short = False, True, True
     tail, last = b"", b"\n"
     first = True
     while n := _filled(file, room):
@@ -49,6 +50,7 @@ def survey(file: BinaryIO, separator: str) -> Survey:
         digest.update(block)
         values = np.frombuffer(block, dtype=np.uint8)
         n_here = int(np.count_nonzero(values == _NEWLINE))
+        quoted_rows = quoted_rows or _has_quote(room, n, values, n_before - n_newline)
         n_newline += n_here
         lines_short &= n_here > 0 or n < BLOCK_BYTES
         if room.find(b"\r", 0, n) >= 0 or last == b"\r":
@@ -70,6 +72,7 @@ def survey(file: BinaryIO, separator: str) -> Survey:
         digest.hexdigest(),
         n_newline + (last != b"\n"),
         n_return == 0 or n_return == n_pair == n_newline,
+        quoted_rows,
         quotes_in_order,
         lines_short,
     )
@@ -85,6 +88,16 @@ def _filled(file: BinaryIO, room: bytearray) -> int:
             break
         n += more
     return n
+
+
+def _has_quote(room: bytearray, n: int, values: NDArray[np.uint8], n_before: int) -> bool:
+    """Say whether a quote stands in a block behind so many line ends."""
+    if room.find(b'"', 0, n) < 0:
+        return False
+    if n_before <= 0:
+        return True
+    newlines = np.flatnonzero(values == _NEWLINE)
+    return len(newlines) >= n_before and room.find(b'"', int(newlines[n_before - 1]), n) >= 0
 
 
 def _quotes_in_order(lines: bytes, separator: str) -> bool:

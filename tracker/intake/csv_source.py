@@ -6,7 +6,7 @@ import csv
 import heapq
 import re
 import threading
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from itertools import islice
@@ -38,6 +38,13 @@ FOUND_SEPARATORS = ",;\t|"
 
 LONGEST_HEADING_LINE = 4_000_000
 MOST_LINES_OF_HEADINGS = 100
+
+#: Headings from which on DuckDB is given whole lines and splits them itself as lists: its own way
+#: takes memory and time for each column. Only where no row has quotes.
+MANY_HEADINGS = 1_000
+
+#: A separator that stands in no line.
+_NEVER = "\x01\x02\x03\x04"
 
 #: Byte-order marks, the longer ones first, and the encoding each stands for.
 BYTE_ORDER_MARKS = {
@@ -173,14 +180,14 @@ class CsvSource(Source):
 
     def _look(self) -> Survey:
         with opened(self.path, self._packing) as file:
-            seen = of_file = survey(file, self._separator)
+            seen = of_file = survey(file, self._separator, self._n_before)
         if not (self._is_utf_8 and seen.one_line_end):
             copy = self._temporary_folder() / "lines.csv"
             with opened(self.path, self._packing) as file:
                 copy_with_one_line_end(file, self._encoding, copy)
             self._parsed = self._before_quotes = copy
             with copy.open("rb") as file:
-                seen = survey(file, self._separator)
+                seen = survey(file, self._separator, self._n_before)
         if not (seen.quotes_in_order and seen.lines_short):
             folder = self._temporary_folder()
             copy, aside = folder / "quotes.csv", folder / "aside.txt"
@@ -204,18 +211,45 @@ class CsvSource(Source):
         packing = self._packing if self._parsed == self.path else None
         return opened(self._parsed, packing)
 
+    @property
+    def _as_lists(self) -> bool:
+        return len(self.headings) > MANY_HEADINGS and not self._surveyed().quoted_rows
+
+    def cell_at(self, place: int) -> str:
+        return f"cells[{place + 1}]" if self._as_lists else super().cell_at(place)
+
+    def cells_at(self, places: Sequence[int]) -> str:
+        if not self._as_lists:
+            return super().cells_at(places)
+        if len(places) and list(places) == list(range(places[0], places[0] + len(places))):
+            return f"cells[{places[0] + 1}:{places[0] + len(places)}]"
+        return f"list_select(cells, [{', '.join(str(place + 1) for place in places)}])"
+
     def _table(self) -> str:
-        columns = ", ".join(f"'c{place}': 'VARCHAR'" for place in range(len(self.headings)))
+        if not self._as_lists:
+            names = [f"c{place}" for place in range(len(self.headings))]
+            return self._read_csv(names, self._separator, quote='"')
+        lines = self._read_csv(["line"], _NEVER, quote="")
+        n = len(self.headings)
+        more_are_blank = f"len(list_filter(cells[{n + 1}:], lambda cell: cell != '')) = 0"
+        return (
+            f"(SELECT string_split(line, '{self._separator}') AS cells FROM {lines} "  # noqa: S608
+            f"WHERE len(cells) = {n} OR (len(cells) > {n} AND {more_are_blank}))"
+        )
+
+    def _read_csv(self, names: Sequence[str], separator: str, quote: str) -> str:
+        columns = ", ".join(f"'{name}': 'VARCHAR'" for name in names)
         path = str(self._parsed.absolute()).replace("'", "''")
         # Brackets and stars in a path would be taken for a pattern of several files.
         path = "".join(f"[{sign}]" if sign in "*?[" else sign for sign in path)
         packing = self._packing if self._parsed == self.path else None
         return (
             f"read_csv('{path}', auto_detect=false, header=false, skip={self._n_before}, "
-            f"delim='{self._separator}', quote='\"', escape='\"', encoding='utf-8', "
+            f"delim='{separator}', quote='{quote}', escape='{quote}', encoding='utf-8', "
             f"compression='{packing or 'none'}', strict_mode=true, columns={{{columns}}}, "
             # What it passes over is found again by `refusals`.
-            f"ignore_errors=true, max_line_size={2 * LONGEST_RECORD}, buffer_size={16 * LONGEST_RECORD})"
+            f"ignore_errors=true, max_line_size={2 * LONGEST_RECORD}, "
+            f"buffer_size={16 * LONGEST_RECORD})"
         )
 
     # --- Refusals ---------------------------------------------------------------------------------

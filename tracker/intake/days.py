@@ -4,18 +4,19 @@ from __future__ import annotations
 
 import re
 from collections.abc import Sequence
+from dataclasses import dataclass
 
 import numpy as np
-import pyarrow as pa
 from numpy.typing import NDArray
 
 from tracker.errors import IntakeError
 from tracker.intake.chunk import Part
-from tracker.intake.columns import Cells, Texts, flags_of, refuse_stamps, series_of
+from tracker.intake.columns import Cells, flags_of, refuse_stamps, series_of
 from tracker.intake.quality import QualityCodes
 from tracker.intake.readings import ReadingOptions, ReadingsIntake
 from tracker.intake.source import Source
 from tracker.intake.stamps import StampReader
+from tracker.intake.texts import KnownTexts, Texts
 
 #: A heading that names an interval of the day: h01 to h25, or a time of day.
 INTERVAL_HEADING = re.compile(r"h\d{1,3}|\d{1,2}:\d{2}(:\d{2})?", re.IGNORECASE)
@@ -77,16 +78,33 @@ def take_days(
         source, [source.place_of(heading) for heading in columns], intake.rules[0].heading
     )
     days = StampReader(source.name, intake.options.timezone, date_format=intake.options.date_format)
+    names, dates, words = KnownTexts(), KnownTexts(), KnownTexts()
     ordinal = 0
     for batch in source.batches(select, max(1, CELLS_A_BATCH // len(columns))):
         rows = np.arange(ordinal, ordinal + len(batch), dtype=np.int64)
         ordinal += len(batch)
-        intake.add(_unfolded(intake, batch, rows, columns, days, id_heading, quality))
+        cells = Cells.of(batch, len(columns))
+        texts = _Texts(
+            names.of(batch.column("id")),
+            dates.of(batch.column("date")),
+            words.of(batch.column("quality")),
+        )
+        intake.add(_unfolded(intake, texts, cells, rows, columns, days, id_heading, quality))
+
+
+@dataclass(frozen=True, slots=True)
+class _Texts:
+    """The columns of text of a batch."""
+
+    names: Texts
+    dates: Texts
+    quality: Texts
 
 
 def _unfolded(
     intake: ReadingsIntake,
-    batch: pa.RecordBatch,
+    texts: _Texts,
+    cells: Cells,
     rows: NDArray[np.int64],
     columns: Sequence[str],
     days: StampReader,
@@ -94,7 +112,6 @@ def _unfolded(
     quality: QualityCodes,
 ) -> Part:
     """Turn rows of a day into readings, row by row and in the order of the columns."""
-    cells = Cells.of(batch, len(columns))
     filled = cells.filled
 
     def refuse(lost: NDArray[np.bool_], column: str, code: str, reason: str) -> None:
@@ -107,18 +124,11 @@ def _unfolded(
             intake.findings.add(rows[lost[:, place]], columns[place], code, reason)
 
     good = np.ones(len(rows), dtype=np.bool_)
-    series = series_of(intake, Texts.of(batch.column("id")), good, id_heading, refuse)
-    dates = Texts.of(batch.column("date"))
+    series = series_of(intake, texts.names, good, id_heading, refuse)
+    dates = texts.dates
     table = days.read_days(dates.distinct)
     refuse_stamps(table, dates.place, good, "date", refuse)
-    words = batch.column("quality")
-    flags = flags_of(
-        None if words.null_count == len(words) else Texts.of(words),
-        len(rows),
-        quality,
-        good,
-        refuse,
-    )
+    flags = flags_of(texts.quality, len(rows), quality, good, refuse)
     cells.note_wrong(intake.findings, rows, good, columns)
     kept = filled & ~cells.wrong & good[:, np.newaxis]
     step_s = 60 * (intake.options.interval_min or 60)

@@ -14,7 +14,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
-from typing import BinaryIO
+from typing import BinaryIO, NamedTuple
 from xml.parsers import expat
 
 from tracker.errors import IntakeError
@@ -23,6 +23,7 @@ BLOCK_BYTES = 1 << 18
 READINGS_A_BATCH = 50_000
 DEEPEST_ELEMENT = 100
 LONGEST_TEXT = 200
+MOST_NAMES = 10_000
 
 KINDS = frozenset({"UsagePoint", "MeterReading", "ReadingType", "IntervalBlock"})
 
@@ -38,6 +39,7 @@ READING_ELEMENTS = {
     "quality": "ReadingQuality",
 }
 _TEXTS = TYPE_ELEMENTS | set(READING_ELEMENTS) | {"title"}
+_BEGINNINGS = KINDS | {"entry", "link", "IntervalReading"}
 
 
 @dataclass(slots=True)
@@ -56,8 +58,7 @@ class Entry:
         return next(iter(self.links.get(relation, ())), "")
 
 
-@dataclass(frozen=True, slots=True)
-class RawReading:
+class RawReading(NamedTuple):
     """An IntervalReading as it stands."""
 
     place: int  #: in the feed, from 1
@@ -111,6 +112,7 @@ class _Feed:
         self._name = name
         self._on_readings = on_readings
         self._on_entry = on_entry
+        self._names: dict[str, str] = {}
         self._within: list[str] = []
         self._entry: Entry | None = None
         self._n_entry = self._n_reading = 0
@@ -118,11 +120,11 @@ class _Feed:
         self._line = 0
         self._text: list[str] | None = None
         self._held: list[RawReading] = []
+        self._take_text = self._characters
         self.parser = expat.ParserCreate(namespace_separator=" ")
         self.parser.buffer_text = True
         self.parser.StartElementHandler = self._start
         self.parser.EndElementHandler = self._end
-        self.parser.CharacterDataHandler = self._characters
         self.parser.EntityDeclHandler = self._entity
 
     def flush(self) -> None:
@@ -132,27 +134,41 @@ class _Feed:
             self._held = []
 
     def _start(self, tag: str, attributes: dict[str, str]) -> None:
-        name = tag.rpartition(" ")[2]
-        within = self._within
-        if name == "entry":
-            self._n_entry += 1
-            self._entry = Entry(self._n_entry, self.parser.CurrentLineNumber)
-        elif name == "IntervalReading":
-            self._reading = {}
-            self._line = self.parser.CurrentLineNumber
-        elif self._entry is not None and within:
-            if name == "link" and within[-1] == "entry":
-                links = self._entry.links.setdefault(attributes.get("rel", ""), [])
-                links.append(_plain(attributes.get("href", "")))
-            elif name in KINDS and within[-1] == "content":
-                self._entry.kind = name
-        within.append(name)
-        if len(within) > DEEPEST_ELEMENT:
+        name = self._names.get(tag)
+        if name is None:
+            name = tag.rpartition(" ")[2]
+            if len(self._names) < MOST_NAMES:
+                self._names[tag] = name
+        if name in _TEXTS:
+            self._text = []
+            self.parser.CharacterDataHandler = self._take_text
+        else:
+            self._text = None
+            if name in _BEGINNINGS:
+                self._begin(name, attributes)
+        self._within.append(name)
+        if len(self._within) > DEEPEST_ELEMENT:
             raise IntakeError(
                 f"{self._name}: line {self.parser.CurrentLineNumber}: elements stand more than "
                 f"{DEEPEST_ELEMENT} deep in one another, so this is no Green Button feed."
             )
-        self._text = [] if name in _TEXTS else None
+
+    def _begin(self, name: str, attributes: dict[str, str]) -> None:
+        parent = self._within[-1] if self._within else ""
+        if name == "IntervalReading":
+            self._reading = {}
+            self._line = self.parser.CurrentLineNumber
+        elif name == "entry":
+            self._n_entry += 1
+            self._entry = Entry(self._n_entry, self.parser.CurrentLineNumber)
+        elif self._entry is None:
+            return
+        elif name == "link":
+            if parent == "entry":
+                links = self._entry.links.setdefault(attributes.get("rel", ""), [])
+                links.append(_plain(attributes.get("href", "")))
+        elif parent == "content":
+            self._entry.kind = name
 
     def _characters(self, text: str) -> None:
         if self._text is not None and len(self._text) < LONGEST_TEXT:
@@ -163,26 +179,22 @@ class _Feed:
         if self._text is not None:
             self._take(name, " ".join("".join(self._text).split())[:LONGEST_TEXT])
             self._text = None
-        if name == "IntervalReading" and self._reading is not None:
-            found = self._reading
-            self._n_reading += 1
-            self._held.append(
-                RawReading(
-                    self._n_reading,
-                    self._line,
-                    self._entry.number if self._entry is not None else 0,
-                    found.get("start", ""),
-                    found.get("duration", ""),
-                    found.get("value", ""),
-                    found.get("quality", ""),
-                )
-            )
-            self._reading = None
-            if len(self._held) >= READINGS_A_BATCH:
-                self.flush()
+            self.parser.CharacterDataHandler = None
+        elif name == "IntervalReading":
+            self._end_of_reading()
         elif name == "entry" and self._entry is not None:
             self._on_entry(self._entry)
             self._entry = None
+
+    def _end_of_reading(self) -> None:
+        found = self._reading if self._reading is not None else {}
+        self._reading = None
+        self._n_reading += 1
+        entry = self._entry.number if self._entry is not None else 0
+        texts = (found.get(name, "") for name in ("start", "duration", "value", "quality"))
+        self._held.append(RawReading(self._n_reading, self._line, entry, *texts))
+        if len(self._held) >= READINGS_A_BATCH:
+            self.flush()
 
     def _take(self, name: str, text: str) -> None:
         """Take the text of an element, where it is one that counts."""

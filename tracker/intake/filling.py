@@ -103,9 +103,13 @@ def _gaps_of(
     held: NDArray[np.bool_],
 ) -> tuple[NDArray[np.intp], NDArray[np.intp], NDArray[np.intp]]:
     """Return row, first place and first place after it of every gap."""
-    edges = np.diff(held.view(np.int8), axis=1, prepend=np.int8(1), append=np.int8(1))
-    row, start = np.nonzero(edges < 0)
-    return row, start, np.nonzero(edges > 0)[1]
+    n_row, n_value = held.shape
+    framed = np.ones((n_row, n_value + 2), dtype=np.bool_)  # so that every gap has two edges
+    framed[:, 1:-1] = held
+    flat = framed.ravel()
+    edges = np.flatnonzero(flat[1:] != flat[:-1])
+    row, start = np.divmod(edges[::2], n_value + 2)
+    return row, start, edges[1::2] - row * (n_value + 2)
 
 
 def _kinds(
@@ -124,7 +128,10 @@ def _kinds(
 def _fill(
     power: Float32Array, flags: FlagArray, first: int, stop: int, line: int, week: int, n_week: int
 ) -> None:
-    """Fill the places from `first` to `stop` of each row from readings anywhere in it."""
+    """Fill the places from `first` to `stop` of each row from readings anywhere in it.
+
+    Rows reach `n_week` weeks beyond those places on both sides.
+    """
     is_read = (flags & _ANY) == _HELD
     row, start, end = _gaps_of(is_read)
     length = end - start
@@ -175,12 +182,13 @@ def _take_like_days(
     """Take the mean of the readings whole weeks before and after; leave the gap where there is none."""
     n = np.zeros(len(at), dtype=np.int64)
     total = np.zeros((3, len(at)))
+    place = row * flags.shape[1] + at
     for k in range(-n_week, n_week + 1):
-        like = at + k * week
-        known = np.flatnonzero((like >= 0) & (like < flags.shape[1]))
-        known = known[is_read[row[known], like[known]]]  # a gap itself is never read
-        total[:, known] += power[:, row[known], like[known]]
-        n[known] += 1
+        like = place + k * week  # in the same row, which reaches as far on both sides
+        known = is_read.ravel()[like]  # never so in the gap itself, where k is 0
+        n += known
+        for which in range(3):
+            total[which] += np.where(known, power[which].ravel()[like], np.float32(0.0))
     some = n > 0
     power[:, row[some], at[some]] = total[:, some] / n[some]
     flags[row[some], at[some]] = _LIKE

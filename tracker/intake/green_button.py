@@ -123,9 +123,7 @@ class GreenButtonSource(Source):
         return entries
 
     def _insert_readings(self, readings: list[RawReading]) -> None:
-        names = RawReading.__slots__
-        rows = [tuple(getattr(reading, name) for name in names) for reading in readings]
-        self._insert("raw_reading", rows, names)
+        self._insert("raw_reading", readings, RawReading._fields)
 
     def _insert(self, table: str, rows: Sequence[tuple[Any, ...]], names: Sequence[str]) -> None:
         if rows:
@@ -149,10 +147,10 @@ class GreenButtonSource(Source):
             "CREATE TABLE row AS SELECT usage_point AS c0, any_value(title) AS c1, href AS c2, "  # noqa: S608
             f"read_at AS c{len(NAMES)}, {values}, "
             f"arg_max(word, rank) AS c{len(NAMES) + 1 + len(quantities)}, "
-            "min(line) AS line, string_agg(shown, '; ' ORDER BY place) AS shown "
+            "min(line) AS line, list(place ORDER BY place) AS places "
             "FROM reading GROUP BY usage_point, href, read_at, duration_s, turn ORDER BY min(place)"
         )
-        self._database.execute("DROP TABLE reading; DROP TABLE raw_reading")
+        self._database.execute("DROP TABLE reading")
 
     def _make_channels(self) -> None:
         """Write down by which links a block names its channel, and what the channel is."""
@@ -210,7 +208,8 @@ class GreenButtonSource(Source):
     def _refused_before(self) -> Iterator[Refusal]:
         """Yield the readings that did not become rows."""
         found = self._database.cursor().execute(
-            "SELECT line, code, reason, shown FROM refused ORDER BY place"
+            f"SELECT line, code, reason, {_SHOWN} FROM refused JOIN raw_reading USING (place, line) "  # noqa: S608
+            "ORDER BY place"
         )
         while some := found.fetchmany(ROWS_SHOWN):
             for line, code, reason, shown in some:
@@ -231,7 +230,12 @@ class GreenButtonSource(Source):
         wanted = ", ".join(str(ordinal) for ordinal, _ in held)
         rows = (
             self._database.cursor()
-            .execute(f"SELECT line, shown FROM row WHERE rowid IN ({wanted}) ORDER BY rowid")  # noqa: S608
+            .execute(
+                f"SELECT any_value(of.line), string_agg({_SHOWN}, '; ' ORDER BY place) FROM "  # noqa: S608
+                f"(SELECT rowid AS ordinal, line, unnest(places) AS place FROM row "
+                f"WHERE rowid IN ({wanted})) AS of JOIN raw_reading USING (place) "
+                "GROUP BY ordinal ORDER BY ordinal"
+            )
             .fetchall()
         )
         for (_, findings), (line, shown) in zip(held, rows, strict=True):
@@ -261,6 +265,11 @@ def _our_word(code: str, words: QualityCodes) -> str | None:
     return next((word for word in WORST_LAST if words.meaning(word) == meaning), None)
 
 
+#: A reading as it stands in the feed.
+_SHOWN = (
+    "concat_ws(', ', 'start ' || start, 'duration ' || duration, 'value ' || raw_reading.value, "
+    "nullif('quality ' || raw_reading.quality, 'quality '))"
+)
 _LENGTHS_S = ", ".join(str(60 * minutes) for minutes in INTERVALS_MIN)
 
 #: Readings with what their channel says of them. `turn` tells readings apart that the feed holds
@@ -274,12 +283,9 @@ SELECT place, line, usage_point, title, href, quantity, problem, per_hour, durat
          THEN number * CASE WHEN per_hour THEN 3600.0 / duration_s ELSE 1.0 END END AS value,
     duration_s IS NULL OR duration_s IN ({_LENGTHS_S}) AS is_interval,
     row_number() OVER (
-        PARTITION BY href, quantity, sign, start, duration_s ORDER BY place) AS turn,
-    concat_ws(', ', 'start ' || start, 'duration ' || duration, 'value ' || raw,
-        nullif('quality ' || given, 'quality ')) AS shown
+        PARTITION BY href, quantity, sign, start, duration_s ORDER BY place) AS turn
 FROM (
-    SELECT place, line, channel.*, start, duration, raw_reading.value AS raw, raw_reading.quality AS given,
-        quality.word, quality.rank,
+    SELECT place, line, channel.*, start, duration, raw_reading.value AS raw, quality.word, quality.rank,
         CASE WHEN regexp_full_match(start, '-?\\d{{1,11}}') THEN start::BIGINT END AS start_s,
         CASE WHEN regexp_full_match(duration, '\\d{{1,9}}') THEN duration::BIGINT END AS duration_s,
         TRY_CAST(raw_reading.value AS DOUBLE) * sign * times / over AS number
@@ -295,7 +301,7 @@ FROM (
 
 _REFUSED = """
 CREATE TABLE refused AS
-SELECT place, line, shown,
+SELECT place, line,
     CASE WHEN href IS NULL THEN 'reading.no_meter' ELSE 'interval.length' END AS code,
     CASE WHEN href IS NULL THEN 'the feed has no MeterReading that this block belongs to'
          WHEN duration_s IS NULL

@@ -12,9 +12,7 @@ from numpy.typing import NDArray
 from tracker.intake.ahead import ahead
 from tracker.intake.chunk import Part
 from tracker.intake.columns import (
-    Texts,
     flags_of,
-    numbers_of,
     refuse_stamps,
     refuse_texts,
     series_of,
@@ -23,6 +21,7 @@ from tracker.intake.quality import QualityCodes
 from tracker.intake.readings import QuantityRule, ReadingsIntake
 from tracker.intake.source import Source
 from tracker.intake.stamps import StampReader, StampTable
+from tracker.intake.texts import KnownTexts, Texts
 
 #: Batches decoded ahead while readings are merged; about one chunk of readings.
 BATCHES_AHEAD = 16
@@ -52,12 +51,23 @@ def take_long(
     stamps = StampReader(
         source.name, intake.options.timezone, stamp_format=intake.options.stamp_format
     )
-    decoded = (_decoded(batch, intake.rules, stamps) for batch in source.batches(select))
+    known = _Known(stamps, KnownTexts(), KnownTexts(), KnownTexts())
+    decoded = (_decoded(batch, intake.rules, known) for batch in source.batches(select))
     ordinal = 0
     for batch in ahead(decoded, BATCHES_AHEAD):
         rows = np.arange(ordinal, ordinal + len(batch.first_s), dtype=np.int64)
         ordinal += len(rows)
         intake.add(_part(intake, batch, rows, id_heading, quality))
+
+
+@dataclass(frozen=True, slots=True)
+class _Known:
+    """What is remembered from batch to batch."""
+
+    reader: StampReader
+    names: KnownTexts
+    stamps: KnownTexts
+    quality: KnownTexts
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,22 +84,27 @@ class _Batch:
     quality: Texts | None
 
 
-def _decoded(batch: pa.RecordBatch, rules: Sequence[QuantityRule], stamps: StampReader) -> _Batch:
+def _decoded(batch: pa.RecordBatch, rules: Sequence[QuantityRule], known: _Known) -> _Batch:
     """Decode a batch; done ahead of the rest of the work, in a thread of its own."""
     quality = batch.column("quality")
-    stamp = Texts.of(batch.column("stamp"))
-    table = stamps.read(stamp.distinct)
+    stamp = known.stamps.of(batch.column("stamp"))
+    table = known.reader.read(stamp.distinct)
     first_s = table.first_s[stamp.place]
     twice = (table.first_s != table.second_s).any()
     return _Batch(
-        Texts.of(batch.column("id")),
+        known.names.of(batch.column("id")),
         table,
         stamp.place,
         first_s,
         table.second_s[stamp.place] if twice else first_s,
-        np.stack([numbers_of(batch.column(f"value{place}")) for place in range(len(rules))]),
+        np.stack(
+            [
+                batch.column(f"value{place}").to_numpy(zero_copy_only=False)
+                for place in range(len(rules))
+            ]
+        ),
         [batch.column(f"wrong{place}") for place in range(len(rules))],
-        None if quality.null_count == len(quality) else Texts.of(quality),
+        None if quality.null_count == len(quality) else known.quality.of(quality),
     )
 
 

@@ -18,6 +18,7 @@ from tracker.intake.interval import INTERVALS_MIN, found_intervals, in_time_orde
 from tracker.intake.merge import CORRECTED, TAKEN, UNCHANGED, Readings, merge
 from tracker.intake.report import Fates, Findings
 from tracker.store import readings as held_readings
+from tracker.store.models import ID_LENGTH
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,6 +75,9 @@ class ReadingsIntake:
     readings_of_step: dict[int, int] = field(default_factory=dict)  #: [min]: how many
     snapped: int = 0  #: stamps that were a little off
     _keys: list[int] = field(default_factory=list)
+    _named: tuple[list[str | None], NDArray[np.int32]] = field(
+        default_factory=lambda: ([], np.empty(0, dtype=np.int32))
+    )
     _last_step: NDArray[np.int32] = field(default_factory=lambda: np.zeros(0, dtype=np.int32))
     _chunk: Chunk = field(init=False)
     _repeats: dict[tuple[int, int], int] = field(default_factory=dict)
@@ -85,6 +89,23 @@ class ReadingsIntake:
     def place_of(self, name: str) -> int:
         """Return the place of a series in this file, giving it one at its first reading."""
         return self.names.setdefault(name, len(self.names))
+
+    def places_of(self, texts: list[str | None]) -> NDArray[np.int32]:
+        """Return the places of series by their names, -1 where a text is no name.
+
+        A list that grew since the last call costs only what is new in it.
+        """
+        if texts is not self._named[0]:
+            self._named = texts, np.empty(0, dtype=np.int32)
+        known = len(self._named[1])
+        if known < len(texts):
+            new = [
+                self.place_of(text) if text is not None and len(text) <= ID_LENGTH else -1
+                for text in texts[known:]
+            ]
+            places = np.concatenate([self._named[1], np.array(new, dtype=np.int32)])
+            self._named = texts, places
+        return self._named[1]
 
     @property
     def keys(self) -> Sequence[int]:

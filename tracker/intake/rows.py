@@ -10,7 +10,7 @@ from __future__ import annotations
 import tempfile
 import weakref
 from abc import ABC, abstractmethod
-from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from pathlib import Path
 from shutil import rmtree
 from typing import TYPE_CHECKING
@@ -122,8 +122,11 @@ class Source(ABC):
         return [
             own
             for place, own in enumerate(self._own_headings)
-            if matched(self.headings[place]) not in known
-            or place not in self._places.get(matched(self.headings[place]), ())
+            if own
+            and (
+                matched(self.headings[place]) not in known
+                or place not in self._places.get(matched(self.headings[place]), ())
+            )
         ]
 
     # --- Columns as SQL ---------------------------------------------------------------------------
@@ -152,14 +155,14 @@ class Source(ABC):
         number = self.guide.unit_sql(heading, self._number(place))
         return f"CASE WHEN isfinite({number}) THEN {number} END"
 
-    def cells_at(self, places: Iterable[int]) -> str:
+    def cells_at(self, places: Sequence[int]) -> str:
         """Return one SQL list of the columns of text at many places.
 
         For files of thousands of columns, where an expression for each takes minutes.
         """
         return f"[{', '.join(map(self.cell_at, places))}]"
 
-    def numbers_at(self, places: Iterable[int], heading: str) -> str:
+    def numbers_at(self, places: Sequence[int], heading: str) -> str:
         """Return one SQL list of the columns at many places as numbers; see `number_at`."""
         numbers = self._numbers(places)
         in_unit = self.guide.unit_sql(heading, "x")
@@ -170,7 +173,7 @@ class Source(ABC):
     def _number(self, place: int) -> str:
         return f"TRY_CAST({self._plain_digits(self.cell_at(place))} AS DOUBLE)"
 
-    def _numbers(self, places: Iterable[int]) -> str:
+    def _numbers(self, places: Sequence[int]) -> str:
         texts = self.cells_at(places)
         plain = self._plain_digits("x")
         if plain != "x":

@@ -68,8 +68,14 @@ class StampTable:
 _Read = tuple[int, int, bool] | tuple[str, str]
 
 
+_UNREAD = (NO_STAMP, NO_STAMP, False)
+_NO_STAMPS = StampTable(
+    np.empty(0, dtype=np.int64), np.empty(0, dtype=np.int64), np.empty(0, dtype=np.bool_), {}
+)
+
+
 class StampReader:
-    """Reads stamps and dates; remembers what it has read.
+    """Reads stamps and dates.
 
     Parameters
     ----------
@@ -97,7 +103,7 @@ class StampReader:
         self._stamp_format = stamp_format
         self._date_format = date_format
         self.latest_s = ((now or dt.datetime.now(dt.UTC)) + AHEAD_OF_NOW).timestamp()
-        self._known: dict[str, _Read] = {}
+        self._last: tuple[Sequence[str | None], StampTable] = ((), _NO_STAMPS)
 
     def read(self, texts: Sequence[str | None]) -> StampTable:
         """Read distinct stamps.
@@ -114,23 +120,21 @@ class StampReader:
         return self._table(texts, self._day)
 
     def _table(self, texts: Sequence[str | None], reader: Callable[[str], _Read]) -> StampTable:
-        first = np.full(len(texts), NO_STAMP, dtype=np.int64)
-        second = np.full(len(texts), NO_STAMP, dtype=np.int64)
-        snapped = np.zeros(len(texts), dtype=np.bool_)
-        problems: dict[int, tuple[str, str]] = {}
-        for place, text in enumerate(texts):
-            known: _Read
-            if text is None:
-                known = _BLANK
-            elif text in self._known:
-                known = self._known[text]
-            else:
-                known = self._known[text] = reader(text)
-            if len(known) == 2:
-                problems[place] = known
-            else:
-                first[place], second[place], snapped[place] = known
-        return StampTable(first, second, snapped, problems)
+        """Return the moments of texts; a list that grew since the last call costs what is new in it."""
+        known = self._last[1] if texts is self._last[0] else _NO_STAMPS
+        n_known = len(known.first_s)
+        new = [_BLANK if text is None else reader(text) for text in texts[n_known:]]
+        moments = [each if len(each) == 3 else _UNREAD for each in new]
+        first_s, second_s, snapped = np.array(moments, dtype=np.int64).reshape(-1, 3).T
+        problems = {place: each for place, each in enumerate(new, n_known) if len(each) == 2}
+        table = StampTable(
+            np.concatenate([known.first_s, first_s]),
+            np.concatenate([known.second_s, second_s]),
+            np.concatenate([known.snapped, snapped.astype(np.bool_)]),
+            {**known.problems, **problems},
+        )
+        self._last = texts, table
+        return table
 
     def _moment(self, text: str) -> _Read:
         stamp = self._stamp_of(text)

@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numba import njit
@@ -17,6 +18,7 @@ from numpy.typing import NDArray
 
 from tracker.electrical.power import reactive_per_active
 from tracker.intake.member_load import MemberLoads
+from tracker.intake.validation import FROM_PYTHON
 from tracker.settings import DEFAULT_POWER_FACTOR
 from tracker.store.blocks import FlagArray, Float32Array, Quality
 from tracker.store.measured import ALL_MEASURED
@@ -27,6 +29,7 @@ _NOT_READ = int(Quality.FILLED | Quality.LIKE_DAYS | Quality.SPREAD)
 _NOT_MEASURED = int(_NOT_READ | Quality.ESTIMATED)
 _UNMETERED = int(Quality.HELD | Quality.ESTIMATED)
 _REACTIVE_OF_UNMETERED = float(reactive_per_active(DEFAULT_POWER_FACTOR))
+_SIZE_OF_UNMETERED = math.sqrt(1.0 + _REACTIVE_OF_UNMETERED**2)
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,7 +67,6 @@ def summed(
     load_kva = np.full(shape, np.nan, dtype=np.float32)
     flags = np.zeros(shape, dtype=np.uint8)
     measured = np.zeros(shape, dtype=np.uint8)
-    all_measured = np.zeros(shape[0], dtype=np.bool_)
     # Made here and passed in, as is the room for the sums: arrays made inside compile slowly.
     n_scaled = _sum_sites(
         bounds,
@@ -81,16 +83,17 @@ def summed(
         load_kva,
         flags,
         measured,
-        all_measured,
         np.zeros(len(loads.members)),
         np.empty((_N_SUMS, shape[1])),
     )
+    all_measured = ((flags == 0) | (measured == ALL_MEASURED)).all(axis=1)
     return SiteLoads(load_kva, flags, all_measured, measured, int(n_scaled))
 
 
-#: A part of `_sum_sites`: never called from outside, so without what a call from outside needs, which
-#: takes as long to compile as the part itself.
-_part = njit(nogil=True, no_cpython_wrapper=True, no_cfunc_wrapper=True)
+#: A part of `_sum_sites`, called from there alone. What makes a function callable from Python takes as
+#: long to compile as the function itself.
+_PART: dict[str, Any] = {"no_cpython_wrapper": True, **FROM_PYTHON}
+_part = njit(nogil=True, **_PART)
 
 #: Rows of the sums of a site: active [kW], reactive [kvar], read without an angle [kVA]; weight of the
 #: meters that are connected, that have a value, whose value was read; size of all that is summed and
@@ -100,7 +103,7 @@ _ACTIVE, _REACTIVE, _APPARENT, _CONNECTED, _KNOWN, _READ, _SIZE, _MEASURED, _MEM
 )
 
 
-@njit(cache=True, nogil=True, no_cfunc_wrapper=True)
+@njit(cache=True, nogil=True, **FROM_PYTHON)
 def _sum_sites(  # type: ignore[no-untyped-def]
     bounds,
     kw,
@@ -116,7 +119,6 @@ def _sum_sites(  # type: ignore[no-untyped-def]
     load,
     site_flags,
     measured,
-    all_measured,
     weight,
     sums,
 ):
@@ -145,7 +147,6 @@ def _sum_sites(  # type: ignore[no-untyped-def]
         for m in range(first, last):
             if whole_site[m]:
                 _lay_over(load, site_flags, measured, site, m, places, kw, kvar, kva, flags)
-        all_measured[site] = whole or _is_all_measured(site_flags, measured, site)
     return n_scaled
 
 
@@ -231,7 +232,7 @@ def _close(  # type: ignore[no-untyped-def]
         lit = unmetered_kw[row, t] if row >= 0 else 0.0
         if not site_flags[site, t]:
             if row >= 0 and sums[_MEMBERS, t] == 0.0:
-                load[site, t] = lit * math.sqrt(1.0 + _REACTIVE_OF_UNMETERED**2)
+                load[site, t] = lit * _SIZE_OF_UNMETERED
                 site_flags[site, t] = _UNMETERED
             continue
         scale = 1.0
@@ -248,12 +249,13 @@ def _close(  # type: ignore[no-untyped-def]
         load[site, t] = (
             math.sqrt(active * active + reactive * reactive) + scale * sums[_APPARENT, t]
         )
-        whole = scale * sums[_SIZE, t] + lit * math.sqrt(1.0 + _REACTIVE_OF_UNMETERED**2)
+        whole = scale * sums[_SIZE, t] + lit * _SIZE_OF_UNMETERED
         if scale == 1.0 and lit == 0.0 and not site_flags[site, t] & _NOT_MEASURED:
             measured[site, t] = ALL_MEASURED
         elif whole > 0.0:
             share = ALL_MEASURED * sums[_MEASURED, t] / whole
-            measured[site, t] = min(int(share + 0.5), ALL_MEASURED - 1)
+            most = ALL_MEASURED - 1
+            measured[site, t] = most if share > most else np.uint8(share + 0.5)
     return n_scaled
 
 
@@ -270,14 +272,6 @@ def _lay_over(  # type: ignore[no-untyped-def]
         load[site, t] = math.sqrt(active * active + reactive * reactive) + kva[m, t]
         site_flags[site, t] = flag
         measured[site, t] = 0 if flag & _NOT_MEASURED else ALL_MEASURED
-
-
-@_part
-def _is_all_measured(site_flags, measured, site):  # type: ignore[no-untyped-def]
-    for t in range(measured.shape[1]):
-        if site_flags[site, t] and measured[site, t] < ALL_MEASURED:
-            return False
-    return True
 
 
 @_part

@@ -5,7 +5,7 @@ from __future__ import annotations
 import csv
 import io
 from abc import abstractmethod
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Iterator, Sequence
 from itertools import groupby
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -71,7 +71,7 @@ class TableSource(Source):
             return f"TRY_CAST(raw.k{place}::VARCHAR AS DOUBLE)"
         return super()._number(place)
 
-    def _numbers(self, places: Iterable[int]) -> str:
+    def _numbers(self, places: Sequence[int]) -> str:
         return f"[{', '.join(map(self._number, places))}]"
 
     def refusals(self, findings: Findings) -> Iterator[Refusal]:

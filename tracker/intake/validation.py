@@ -7,13 +7,19 @@ it by itself.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
+from numba import njit
 from numpy.typing import NDArray
 
 from tracker.settings import ReadingRules
 from tracker.store.blocks import FlagArray, Float32Array
+
+#: For functions called from Python, and from C never: a second way in takes long to compile.
+FROM_PYTHON: dict[str, Any] = {"no_cfunc_wrapper": True}
 
 #: A bit for each rule; all but the last doubt a reading, the last sets it aside.
 SPIKE, STUCK, ZEROS, NEGATIVE, BEYOND = 1, 2, 4, 8, 16
@@ -68,45 +74,38 @@ def marked(
     -------
     marks : uint8, shape (n_member, n_value), or None
     """
-    largest = _largest(kw, kvar, kva)
+    lowest_kw = np.fmin.reduce(kw, axis=1)
+    largest = _largest(lowest_kw, kw, kvar, kva)
     high = np.where(whole_site | (rules.beyond_rating == 0.0), np.nan, rules.beyond_rating)
-    limits = np.column_stack([high * rated_kva, rules.spike_least_load_pct / 100.0 * rated_kva])
-    limits /= multiplier[:, np.newaxis]
+    high = high * rated_kva / multiplier
+    least = rules.spike_least_load_pct / 100.0 * rated_kva / multiplier
     marks = np.zeros(flags.shape, dtype=np.uint8)
     # Most rows hold nothing that a rule could find, and need no second look.
-    rows = np.flatnonzero(largest > limits[:, 0])
+    rows = np.flatnonzero(largest > high)
     if len(rows):
-        marks[rows] |= _beyond(kw[rows], kvar[rows], kva[rows], flags[rows], limits[rows, :1])
-    rows = np.flatnonzero((largest >= limits[:, 1]) & (rules.spike_excess_pct > 0.0))
+        marks[rows] = _beyond(kw[rows], kvar[rows], kva[rows], flags[rows], high[rows, np.newaxis])
+    rows = np.flatnonzero((largest >= least) & (rules.spike_excess_pct > 0.0))
     if len(rows):
-        held = (flags[rows] != 0) & (marks[rows] == 0)
-        marks[rows] |= _spikes(
-            kw[rows],
-            kvar[rows],
-            kva[rows],
-            held,
-            limits[rows, 1],
-            1440 // step_min,
-            rules.spike_excess_pct / 100.0,
-        )
+        excess = rules.spike_excess_pct / 100.0
+        _mark_spikes(kw, kvar, kva, flags, rows, 1440 // step_min, excess, least, marks)
     stuck, zeros = _places(rules.stuck_h, step_min), _places(rules.zero_run_h, step_min)
     rows = _may_run(kw, kva, min(stuck, zeros))
     if len(rows):
         marks[rows] |= _runs(kw[rows] + kva[rows], flags[rows], marks[rows], stuck, zeros)
-    rows = np.flatnonzero((np.fmin.reduce(kw, axis=1) < 0.0) & (rules.negative_pct > 0.0))
+    rows = np.flatnonzero((lowest_kw < 0.0) & (rules.negative_pct > 0.0))
     if len(rows):
         read = (flags[rows] != 0) & ((marks[rows] & BEYOND) == 0)
         marks[rows] |= _negative(kw[rows], read, rules.negative_pct / 100.0)
     return marks if marks.any() else None
 
 
-def _largest(kw: Float32Array, kvar: Float32Array, kva: Float32Array) -> NDArray[np.float64]:
+def _largest(
+    lowest_kw: Float32Array, kw: Float32Array, kvar: Float32Array, kva: Float32Array
+) -> NDArray[np.float64]:
     """Return a bound of the size of each row's readings [kVA]."""
-    active, reactive = (
-        np.fmax(np.fmax.reduce(each, axis=1), -np.fmin.reduce(each, axis=1)).astype(np.float64)
-        for each in (kw, kvar)
-    )
-    with_angle = np.hypot(np.nan_to_num(active), np.nan_to_num(reactive))
+    active = np.fmax(np.fmax.reduce(kw, axis=1), -lowest_kw).astype(np.float64)
+    reactive = np.fmax(np.fmax.reduce(kvar, axis=1), -np.fmin.reduce(kvar, axis=1))
+    with_angle = np.hypot(np.nan_to_num(active), np.nan_to_num(reactive.astype(np.float64)))
     return np.asarray(with_angle + np.fmax.reduce(kva, axis=1))
 
 
@@ -132,40 +131,29 @@ def _beyond(
     return _as_marks(larger & (flags != 0), BEYOND)
 
 
-def _spikes(
-    kw: Float32Array,
-    kvar: Float32Array,
-    kva: Float32Array,
-    held: NDArray[np.bool_],
-    least: NDArray[np.float64],
-    day_places: int,
-    excess: float,
-) -> FlagArray:
+# The only rule that numpy takes much longer for: the others are not compiled.
+@njit(cache=True, nogil=True, **FROM_PYTHON)
+def _mark_spikes(  # type: ignore[no-untyped-def]
+    kw, kvar, kva, flags, rows, day_places, excess, least, marks
+):
     """Mark the highest readings of each day that stand above the third by more than `excess`."""
-    marks = np.zeros(kw.shape, dtype=np.uint8)
-    by_day = (len(kw), -1, day_places)
-    value = np.where(held, kw + kva, np.float32(0.0)).reshape(by_day)
-    highest, third = _highest_and_third(value)
-    row, day = np.nonzero((third > 0.0) & (highest - third > excess * third))
-    third = third[row, day, np.newaxis]
-    above = value[row, day] - third > excess * third  # two of a day at most
-    active, reactive, apparent = (each.reshape(by_day)[row, day] for each in (kw, kvar, kva))
-    size = np.sqrt(active * active + reactive * reactive) + apparent
-    marks.reshape(by_day)[row, day] = _as_marks(above & (size >= least[row, np.newaxis]), SPIKE)
-    return marks
-
-
-def _highest_and_third(
-    value: Float32Array,
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Return the highest and the third highest value of each day, none below zero; (n_row, n_day)."""
-    first, second, third = np.zeros((3, *value.shape[:2]), dtype=np.float32)
-    for at in range(value.shape[2]):  # all days side by side: sorting each day takes longer
-        each = value[:, :, at]
-        third = np.maximum(third, np.minimum(second, each))
-        second = np.maximum(second, np.minimum(first, each))
-        first = np.maximum(first, each)
-    return first.astype(np.float64), third.astype(np.float64)
+    for m in rows:
+        for start in range(0, flags.shape[1], day_places):
+            top = second = third = 0.0
+            for t in range(start, start + day_places):
+                value = kw[m, t] + kva[m, t]
+                if value > third and flags[m, t] and not marks[m, t]:
+                    third = value
+                    if third > second:
+                        second, third = third, second
+                    if second > top:
+                        top, second = second, top
+            if third > 0.0 and top - third > excess * third:
+                for t in range(start, start + day_places):
+                    p, q, s = kw[m, t], kvar[m, t], kva[m, t]
+                    high = p + s - third > excess * third and flags[m, t] and not marks[m, t]
+                    if high and math.sqrt(p * p + q * q) + s >= least[m]:
+                        marks[m, t] = SPIKE
 
 
 def _may_run(kw: Float32Array, kva: Float32Array, shortest: float) -> NDArray[np.intp]:

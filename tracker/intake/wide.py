@@ -6,16 +6,16 @@ from collections import Counter
 from collections.abc import Sequence
 
 import numpy as np
-import pyarrow as pa
 from numpy.typing import NDArray
 
 from tracker.errors import IntakeError
 from tracker.intake.chunk import Part
-from tracker.intake.columns import Cells, Texts, flags_of, refuse_stamps
+from tracker.intake.columns import Cells, flags_of, refuse_stamps
 from tracker.intake.quality import QualityCodes
 from tracker.intake.readings import ReadingsIntake
 from tracker.intake.source import Source, matched
 from tracker.intake.stamps import StampReader
+from tracker.intake.texts import KnownTexts, Texts
 from tracker.store.models import ID_LENGTH
 
 #: Columns of a file read side by side; one with more is read several times.
@@ -80,6 +80,7 @@ def _take_columns(
     select |= Cells.select(source, places, intake.rules[0].heading)
     names = [source.headings[place] for place in places]
     series = np.array([intake.place_of(name) for name in names], dtype=np.int32)
+    known_stamps, known_words = KnownTexts(), KnownTexts()
     ordinal = 0
     for batch in source.batches(select, max(1, CELLS_A_BATCH // len(places))):
         cells = Cells.of(batch, len(names))
@@ -87,7 +88,9 @@ def _take_columns(
             _check_numbers(source.name, cells, names)
         rows = np.arange(ordinal, ordinal + len(batch), dtype=np.int64)
         ordinal += len(batch)
-        intake.add(_unfolded(intake, batch, cells, rows, names, series, stamps, quality))
+        stamp = known_stamps.of(batch.column("stamp"))
+        words = known_words.of(batch.column("quality"))
+        intake.add(_unfolded(intake, stamp, words, cells, rows, names, series, stamps, quality))
 
 
 def _check_numbers(file: str, cells: Cells, names: Sequence[str]) -> None:
@@ -103,7 +106,8 @@ def _check_numbers(file: str, cells: Cells, names: Sequence[str]) -> None:
 
 def _unfolded(
     intake: ReadingsIntake,
-    batch: pa.RecordBatch,
+    stamp: Texts,
+    words: Texts,
     cells: Cells,
     rows: NDArray[np.int64],
     names: Sequence[str],
@@ -121,17 +125,9 @@ def _unfolded(
             intake.findings.add(rows[filled[place] & lost], names[place], code, reason)
 
     good = np.ones(len(rows), dtype=np.bool_)
-    stamp = Texts.of(batch.column("stamp"))
     table = stamps.read(stamp.distinct)
     refuse_stamps(table, stamp.place, good, "read_at", refuse)
-    words = batch.column("quality")
-    flags = flags_of(
-        None if words.null_count == len(words) else Texts.of(words),
-        len(rows),
-        quality,
-        good,
-        refuse,
-    )
+    flags = flags_of(words, len(rows), quality, good, refuse)
     cells.note_wrong(intake.findings, rows, good, names)
     kept = filled & ~cells.wrong.T & good
     column_of, row_of = np.nonzero(kept)

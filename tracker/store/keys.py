@@ -20,13 +20,13 @@ def in_parts(keys: Sequence[Key], size: int = KEYS_A_QUERY) -> Iterator[Sequence
 
 
 def among(column: Any, keys: Sequence[int]) -> ColumnElement[bool]:
-    """Return the condition that a column is one of some keys, given in order.
+    """Return the condition that a column is one of some keys, in any order.
 
     Keys that are neighbours all, as most are, need not be named one by one.
     """
     condition: ColumnElement[bool]
-    if keys and keys[-1] - keys[0] + 1 == len(keys):
-        condition = column.between(keys[0], keys[-1])
+    if keys and max(keys) - min(keys) + 1 == len(set(keys)):
+        condition = column.between(min(keys), max(keys))
     else:
         condition = column.in_(keys)
     return condition
