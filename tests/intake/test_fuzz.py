@@ -20,11 +20,11 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
 from sqlalchemy import func, select
-from tracker.intake.guide_draft import draft_guide
 
 from tracker.errors import TrackerError
 from tracker.intake.files import files_named, intake_options, take_files
 from tracker.intake.guide import read_guide
+from tracker.intake.guide_draft import draft_guide
 from tracker.store.models import IntakeFile, IntakeRefusal
 
 #: Files a test takes in one after the other, into one store.
